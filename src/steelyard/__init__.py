@@ -1,0 +1,1 @@
+"""Effects of exposures nobody randomised, from household surveys."""

@@ -1,0 +1,1 @@
+"""Whether the groups are comparable: moments, distributions, moment conditions, before and after."""

@@ -1,0 +1,261 @@
+"""From an extract to design rows: the first reading looks, the second builds.
+
+The first reading finds levels, units and exclusions and lets the formulas learn; the second builds the
+design rows, block by block, and nothing is built again after that.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass
+from itertools import pairwise
+
+import numpy as np
+import pyarrow as pa
+from numpy.typing import NDArray
+
+from steelyard.data.blocks import Block, Model, Rows
+from steelyard.data.checkup import Checkup, conclude
+from steelyard.data.coding import UnitCoder, UnitCollector
+from steelyard.data.formula import DesignBuilder, learn
+from steelyard.data.passes import Engine
+from steelyard.data.reading import Chunk, Reader, reader
+from steelyard.data.source import READ_ROWS, Extract
+from steelyard.data.tally import Tally
+from steelyard.data.terms import TermPlan, plan_terms
+from steelyard.data.values import Values, levels_of
+from steelyard.errors import ExtractError, FormulaError, PlanError
+from steelyard.plan import Plan
+
+Floats = NDArray[np.float64]
+Levels = Mapping[str, tuple[str, ...]]
+
+
+def build_rows(extract: Extract, plan: Plan, engine: Engine, block_rows: int = 8192) -> tuple[Rows, Checkup]:
+    """Read an extract twice and return its design rows and its check-up.
+
+    Parameters
+    ----------
+    block_rows : rows of the extract to a block, before those outside the domain are left out
+
+    Raises
+    ------
+    SteelyardError
+        The extract, the design or the plan cannot give an answer; see :mod:`steelyard.errors`.
+    """
+    if block_rows < 1:
+        raise PlanError(
+            f"block_rows is {block_rows}.", mend="Give a block at least one row; 8192 is the default."
+        )
+    plan_reader = reader(extract, plan)
+    size = block_rows * max(1, READ_ROWS // block_rows)
+    tally, coder, levels = _look(plan_reader, size, engine)
+    _refuse_unusable(plan_reader, tally)
+    assembly = _assembly(plan_reader, levels, coder, size)
+    blocks = _blocks(plan_reader, assembly, block_rows, size, engine)
+    names, exposure_model, outcome_models = assembly.columns()
+    rows = Rows(
+        blocks=blocks,
+        names=names,
+        exposure_model=exposure_model,
+        outcome_models=outcome_models,
+        outcomes=tuple(names.index(f"outcome {outcome.name}") for outcome in plan.outcome),
+        terms=tuple(assembly.terms.terms),
+        levels=_level_names(plan_reader, tally),
+        units=coder.units,
+        total=tally.rows,
+        exclusions={plan_reader.reasons[k]: n for k, n in sorted(tally.reasons.items())},
+        warnings=(*coder.notes, *_constant_warnings(plan_reader, tally)),
+    )
+    return rows, conclude(plan_reader, tally, rows, coder.notes, extract.digests(), engine)
+
+
+def _look(plan_reader: Reader, size: int, engine: Engine) -> tuple[Tally, UnitCoder, Levels]:
+    """The first reading: count, collect units and levels."""
+    tally, collector = Tally(plan_reader), UnitCollector(plan_reader.plan.design)
+    levels: dict[str, set[str]] = {name: set() for name in plan_reader.categories}
+    extract = plan_reader.extract
+    for start, table in extract.read(plan_reader.columns, size):
+        chunk = plan_reader.chunk(start, table)
+        tally.add(chunk)
+        collector.add(table, chunk.kept)
+        for name, found in levels.items():
+            found |= levels_of(table.column(name), plan_reader.plan.data.missing.get(name, ()))
+        engine.progress("reading: look", min(start + size, extract.rows), extract.rows)
+    tally.refuse_bad_weights()
+    return tally, collector.finish(), {name: tuple(sorted(found)) for name, found in levels.items()}
+
+
+def _refuse_unusable(plan_reader: Reader, tally: Tally) -> None:
+    exposure, plan = plan_reader.exposure, plan_reader.plan.exposure
+    found = ", ".join(f"{level} ({count:,} rows)" for level, count in tally.levels.most_common(12))
+    if not tally.domain_weights.count:
+        told = ", ".join(f"{plan_reader.reasons[k]} ({n:,} rows)" for k, n in sorted(tally.reasons.items()))
+        if not tally.levels or not tally.reasons.get(3):
+            raise ExtractError(
+                f"No row is left in the domain: {told}.", mend="Check data.domain and the missing codes."
+            )
+    if tally.domain_weights.count and not tally.domain_weights.total > 0:
+        raise ExtractError(
+            f"All {tally.domain_weights.count:,} rows of the domain have sampling weight 0.",
+            mend="Check design.weight and data.domain.",
+        )
+    is_text = plan_reader.extract.columns[exposure] == "category"
+    if plan.exposed is None and is_text:
+        raise PlanError(
+            f'The exposure "{exposure}" is text: {found}.',
+            mend='Say which is which: exposure.exposed = "..." and exposure.reference = "...".',
+        )
+    if plan.exposed is None and set(tally.levels) - {"0", "1"}:
+        raise PlanError(
+            f'The exposure "{exposure}" is not 0 or 1 everywhere in the domain: {found}.',
+            mend="Say which values to compare: exposure.exposed and exposure.reference; or name codes that "
+            "mean 'no answer' in data.missing.",
+        )
+    if plan.exposed is not None and plan.reference is None and len(tally.levels) > 2:
+        raise PlanError(
+            f'The exposure "{exposure}" has {len(tally.levels)} values: {found}.',
+            mend="Name the one to compare with in exposure.reference; rows with another leave the domain.",
+        )
+    exposed, reference = (int(n) for n in tally.inside[1:])
+    if not exposed or not reference:
+        raise PlanError(
+            f'The exposure "{exposure}" has {exposed:,} exposed and {reference:,} reference rows in the '
+            f"domain: {found or 'no value'}.",
+            mend="A comparison needs both; check exposure.exposed, exposure.reference and data.domain.",
+        )
+    for (name, family), count in tally.bad_values.items():
+        if count:
+            raise PlanError(
+                f'The outcome "{name}" has {count:,} row(s) that a {family} outcome cannot have.',
+                mend="A binomial outcome is 0 or 1, a poisson outcome not negative; name codes that mean "
+                "'no answer' in data.missing.",
+            )
+
+
+def _level_names(plan_reader: Reader, tally: Tally) -> tuple[str, str]:
+    plan = plan_reader.plan.exposure
+    exposed = "1" if plan.exposed is None else str(plan.exposed)
+    if plan.reference is not None:
+        return exposed, str(plan.reference)
+    return exposed, next((level for level in tally.levels if level != exposed), "0")
+
+
+def _constant_warnings(plan_reader: Reader, tally: Tally) -> list[str]:
+    return [
+        f"{name} is {tally.low[name]:g} in every row of the domain: it tells nothing there."
+        for name in plan_reader.complete
+        if name in tally.low and tally.low[name] == tally.high[name]
+    ]
+
+
+@dataclass(frozen=True)
+class _Assembly:
+    """How a chunk becomes the columns of a block, and what they are called."""
+
+    plan_reader: Reader
+    levels: Levels
+    coder: UnitCoder
+    exposure: DesignBuilder
+    covariates: tuple[DesignBuilder | None, ...]
+    terms: TermPlan
+
+    def columns(self) -> tuple[tuple[str, ...], Model, tuple[Model | None, ...]]:
+        """Return the names of the blocks' columns, the exposure's model, and the outcomes' models."""
+        names = [*self.exposure.names, *self.terms.extra_names, *self._outcome_names()]
+        models: list[Model | None] = []
+        for builder in self.covariates:
+            if builder is None:
+                models.append(None)
+                continue
+            first = len(names)
+            names += builder.names
+            models.append(_model(builder, tuple(range(first, first + len(builder.names)))))
+        exposure_model = _model(self.exposure, tuple(range(len(self.exposure.names))))
+        return tuple(names), exposure_model, tuple(models)
+
+    def _outcome_names(self) -> list[str]:
+        return list(dict.fromkeys(f"outcome {outcome.name}" for outcome in self.plan_reader.plan.outcome))
+
+    def build(self, values: Mapping[str, Values], n: int) -> Floats:
+        """Return the (n, C) columns of complete rows."""
+        outcomes = dict.fromkeys(outcome.name for outcome in self.plan_reader.plan.outcome)
+        parts = [self.exposure.build(values, n), self.terms.extra(values, n)]
+        parts += [np.asarray(values[name], dtype=np.float64)[:, np.newaxis] for name in outcomes]
+        parts += [builder.build(values, n) for builder in self.covariates if builder is not None]
+        return np.concatenate(parts, axis=1)
+
+
+def _model(builder: DesignBuilder, index: tuple[int, ...]) -> Model:
+    return Model(builder.formula.text, builder.names, index, builder.intercept)
+
+
+def _assembly(plan_reader: Reader, levels: Levels, coder: UnitCoder, size: int) -> _Assembly:
+    """Let the formulas learn from the complete rows of the domain, and plan the columns."""
+
+    def chunks() -> Iterator[Mapping[str, Values]]:
+        for start, table in plan_reader.extract.read(plan_reader.columns, size):
+            chunk = plan_reader.chunk(start, table, levels)
+            if chunk.kept.any():
+                yield _kept(chunk)
+
+    exposure = learn(plan_reader.formula, chunks)
+    covariates = tuple(None if f is None else learn(f, chunks) for f in plan_reader.covariates)
+    terms = plan_terms(exposure, plan_reader.extract.columns, levels, plan_reader.plan.balance)
+    if not terms.terms:
+        raise FormulaError(
+            f'The exposure formula "{plan_reader.formula.text}" has no covariate.',
+            mend="Name what confounds exposure and outcome.",
+        )
+    return _Assembly(plan_reader, levels, coder, exposure, covariates, terms)
+
+
+def _kept(chunk: Chunk) -> dict[str, Values]:
+    return {name: column[chunk.kept] for name, column in chunk.values.items()}
+
+
+def _blocks(
+    plan_reader: Reader, assembly: _Assembly, block_rows: int, size: int, engine: Engine
+) -> list[Block]:
+    """The second reading: build the design rows, chunk by chunk, and cut them into blocks."""
+    names = assembly.columns()[0]
+
+    def build(run: tuple[int, pa.Table]) -> list[Block]:
+        start, table = run
+        chunk = plan_reader.chunk(start, table, assembly.levels)
+        kept = np.flatnonzero(chunk.kept)
+        if not len(kept):
+            return []
+        columns = assembly.build(_kept(chunk), len(kept))
+        _refuse_unfinished(columns, names, start + kept)
+        unit = assembly.coder.encode(table)
+        cuts = np.searchsorted(kept, np.arange(0, table.num_rows + block_rows, block_rows))
+        return [
+            Block(
+                position=(start + kept[a:b]).astype(np.int64),
+                columns=columns[a:b] if b - a == len(kept) else columns[a:b].copy(),
+                exposure=chunk.exposure[kept[a:b]],
+                weight=chunk.weight[kept[a:b]],
+                unit=unit[kept[a:b]],
+            )
+            for a, b in pairwise(cuts)
+            if b > a
+        ]
+
+    runs = plan_reader.extract.read(plan_reader.columns, size)
+    count = -(-plan_reader.extract.rows // size)
+    return engine.run("reading: build", runs, build, total=count)
+
+
+def _refuse_unfinished(columns: Floats, names: tuple[str, ...], position: NDArray[np.int64]) -> None:
+    if np.isfinite(columns).all():
+        return
+    rows, places = np.nonzero(~np.isfinite(columns))
+    place = int(places[0])
+    where = position[rows[places == place]]
+    raise FormulaError(
+        f'The design column "{names[place]}" is not a finite number in {len(where):,} or more rows, first in '
+        f"row(s) {', '.join(map(str, where[:5]))} (counted from 0).",
+        mend="Look at the values there, such as the logarithm of 0: recode them, or name codes in "
+        "data.missing.",
+    )

@@ -1,0 +1,1 @@
+"""How estimates vary: strata, clusters, finite populations, domains, linearized variance."""

@@ -1,0 +1,94 @@
+"""Weighted maximum likelihood over blocks, for one model under every column of weights at once.
+
+Column 0 is solved by Newton's method. The other columns start at its solution and step together
+with its information factored once; a column that has not settled after a few such steps gets
+Newton steps of its own. Columns of the model are centred and scaled inside the fit, so neither
+their units nor the scale of the weights reaches the solver.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from steelyard.data.blocks import Block
+from steelyard.data.passes import Engine
+from steelyard.estimate.linear import Factored
+from steelyard.estimate.moments import Moments
+from steelyard.estimate.newton import Newton
+from steelyard.estimate.regression import Regression, Scale, model_scale
+from steelyard.estimate.together import solve_replicates
+
+Floats = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Fit:
+    """A solved regression.
+
+    Attributes
+    ----------
+    regression : Regression
+    scale : Scale
+    scaled : (p, K)
+        Coefficients of the centred and scaled columns, a column for each column of weights.
+    information : Factored
+        The observed information of the full sample about them, at the solution.
+    aliased : names of columns that others make redundant; their coefficients are zero
+    steps : int
+        Newton steps that column 0 took.
+    failed : mapping
+        Column of weights -> why it has no solution. Its coefficients are NaN.
+    """
+
+    regression: Regression
+    scale: Scale
+    scaled: Floats
+    information: Factored
+    aliased: tuple[str, ...]
+    steps: int
+    failed: dict[int, str]
+
+    @property
+    def coefficients(self) -> Floats:
+        """Coefficients of the columns as they are, (p, K)."""
+        coefficients: Floats = self.scale.matrix() @ self.scaled
+        return coefficients
+
+    def columns(self, block: Block) -> Floats:
+        """Return the block's centred and scaled columns, (n, p)."""
+        return self.scale(self.regression.columns(block))
+
+    def influence(self, block: Block, columns: Floats, eta: Floats) -> Floats:
+        """Return, for each row, its score under a weight of one, through the information; (n, p).
+
+        ``columns`` are those of :meth:`columns`, ``eta`` (n,) the full sample's linear predictor.
+        Multiplied by the row's fit weight and summed, it is the change of the scaled coefficients
+        (Binder 1983).
+        """
+        slope = self.regression.likelihood.score(self.regression.response(block), eta)
+        influence: Floats = columns @ self.information.inverse() * slope[:, np.newaxis]
+        return influence
+
+
+def fit(regression: Regression, moments: Moments, engine: Engine, blocks: Sequence[Block]) -> Fit:
+    """Solve ``sum w score(y, x'b) x = 0`` for every column of weights.
+
+    ``moments`` are those of :func:`steelyard.estimate.regression.model_moments`.
+
+    Raises
+    ------
+    SeparationError
+        Columns of the model tell the two values of a binary response apart.
+    EstimationError
+        The full sample has no solution within the allowed steps.
+    """
+    newton = Newton(regression, model_scale(moments, regression.intercept), engine, blocks)
+    solution = newton.solve()
+    information = newton.observed_information(solution)
+    aliased = tuple(n for n, kept in zip(regression.names, information.keep, strict=True) if not kept)
+    scaled, failed = solve_replicates(newton, solution.b, information)
+    return Fit(regression, newton.scale, scaled, information, aliased, solution.steps, failed)

@@ -1,0 +1,190 @@
+"""Newton's method for one column of weights, with step halving, and what to say when it fails."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from steelyard.data.blocks import Block
+from steelyard.data.passes import Engine
+from steelyard.errors import EstimationError
+from steelyard.estimate.linear import Factored, factored, independent_columns
+from steelyard.estimate.regression import Regression, Scale
+from steelyard.estimate.separation import refuse_separation
+
+Floats = NDArray[np.float64]
+
+# Largest step, in coefficients of unit-spread columns, at which a solution counts as reached.
+STEP_TOLERANCE = 1e-9
+MOST_STEPS = 60
+MOST_HALVINGS = 30
+# From this step on, steps that do not shrink are looked at for separation.
+SUSPICIOUS_STEPS = 9
+
+
+@dataclass(frozen=True)
+class _StepKernel:
+    """From a block to its score, expected information, deviance and count of inadmissible rows at ``b``."""
+
+    regression: Regression
+    scale: Scale
+    b: Floats
+    column: int
+
+    def __call__(self, block: Block) -> tuple[Floats, Floats, float, int]:
+        likelihood = self.regression.likelihood
+        x = self.scale(self.regression.columns(block))
+        y, w = self.regression.response(block), self.regression.weights(block)[:, self.column]
+        eta = x @ self.b
+        size = len(self.b)
+        counted = w > 0
+        if not likelihood.admissible(eta[counted]):
+            return np.zeros(size), np.zeros((size, size)), 0.0, 1
+        if not counted.all():
+            x, y, w, eta = x[counted], y[counted], w[counted], eta[counted]
+        score = x.T @ (w * likelihood.score(y, eta))
+        information = x.T @ (x * (w * likelihood.expected_information(eta))[:, np.newaxis])
+        return score, information, likelihood.deviance(y, eta, w), 0
+
+
+@dataclass(frozen=True)
+class _InformationKernel:
+    """From a block to the observed information of the full sample at ``b``."""
+
+    regression: Regression
+    scale: Scale
+    b: Floats
+
+    def __call__(self, block: Block) -> Floats:
+        x = self.scale(self.regression.columns(block))
+        w = self.regression.weights(block)[:, 0]
+        h = self.regression.likelihood.information(self.regression.response(block), x @ self.b)
+        return x.T @ (x * np.where(w > 0, w * h, 0)[:, np.newaxis])
+
+
+@dataclass(frozen=True)
+class _ResponseKernel:
+    regression: Regression
+
+    def __call__(self, block: Block) -> tuple[float, float]:
+        w = self.regression.weights(block)[:, 0]
+        return float(w @ self.regression.response(block)), float(w.sum())
+
+
+@dataclass(frozen=True)
+class Solution:
+    """Scaled coefficients (p,), the information (p, p) near them, which columns it keeps, steps taken."""
+
+    b: Floats
+    information: Floats
+    keep: NDArray[np.bool_]
+    steps: int
+
+
+@dataclass(frozen=True)
+class Newton:
+    """Newton's method (Fisher scoring off the canonical link) under one column of weights."""
+
+    regression: Regression
+    scale: Scale
+    engine: Engine
+    blocks: Sequence[Block]
+    column: int = 0
+
+    def solve(self, start: Floats | None = None) -> Solution:
+        """Return the solution, from ``start`` (p,) or from the mean response.
+
+        Raises
+        ------
+        SeparationError
+            The coefficients run away because columns separate the response.
+        EstimationError
+            They do not settle for another reason.
+        """
+        b = self._start() if start is None else start
+        score, information, deviance, bad = self._at(b)
+        if bad:
+            raise self._failure("has no admissible starting point")
+        keep = independent_columns(information)
+        previous = np.inf
+        for taken in range(1, MOST_STEPS + 1):
+            try:
+                step = factored(information, keep).solve(score)
+            except np.linalg.LinAlgError:
+                self._look_for_separation(b)
+                raise self._failure("lost its curvature") from None
+            size = float(np.max(np.abs(step), initial=0))
+            if size <= STEP_TOLERANCE:
+                return Solution(b + step, information, keep, taken)
+            if taken > SUSPICIOUS_STEPS and size > 0.1 and size > 0.5 * previous:
+                self._look_for_separation(step)
+            b, (score, information, deviance, _) = self._halved(b, step, deviance)
+            previous = size
+        self._look_for_separation(step)
+        raise self._failure(f"did not settle in {MOST_STEPS} steps")
+
+    def observed_information(self, solution: Solution) -> Factored:
+        """Return the observed information at the solution, factored over the kept columns."""
+        information = solution.information
+        if not self.regression.likelihood.canonical:
+            kernel = _InformationKernel(self.regression, self.scale, solution.b)
+            information = self.engine.run(f"{self.regression.what}: information", self.blocks, kernel)
+        try:
+            return factored(information, solution.keep)
+        except np.linalg.LinAlgError:
+            raise self._failure("has no curvature at its solution") from None
+
+    def _start(self) -> Floats:
+        b = np.zeros(len(self.regression.names))
+        if self.regression.intercept is None:
+            return b
+        total, weight = self.engine.run(
+            f"{self.regression.what}: start", self.blocks, _ResponseKernel(self.regression)
+        )
+        mean = total / weight
+        if self.regression.likelihood.family == "binomial" and not 0 < mean < 1:
+            raise EstimationError(
+                f"{self.regression.what}: the response is {mean:g} in every row that carries weight.",
+                mend="A model needs both values; check the domain and the missing codes.",
+            )
+        if self.regression.likelihood.family == "poisson" and mean <= 0:
+            raise EstimationError(
+                f"{self.regression.what}: the response is 0 in every row that carries weight.",
+                mend="A model of counts needs at least one count above 0.",
+            )
+        if self.regression.likelihood.link == "log" and mean <= 0:
+            raise EstimationError(
+                f"{self.regression.what}: the mean response is {mean:g}, and a ratio needs a positive one.",
+                mend='Ask for measure = "difference".',
+            )
+        b[self.regression.intercept] = self.regression.likelihood.predictor(np.array([mean]))[0]
+        return b
+
+    def _at(self, b: Floats) -> tuple[Floats, Floats, float, int]:
+        kernel = _StepKernel(self.regression, self.scale, b, self.column)
+        return self.engine.run(f"{self.regression.what}: fit", self.blocks, kernel)
+
+    def _halved(
+        self, b: Floats, step: Floats, deviance: float
+    ) -> tuple[Floats, tuple[Floats, Floats, float, int]]:
+        """Take the step, or the longest half, quarter, ... of it that does not raise the deviance."""
+        for _ in range(MOST_HALVINGS):
+            parts = self._at(b + step)
+            if not parts[3] and parts[2] <= deviance + 1e-9 * (abs(deviance) + 1):
+                return b + step, parts
+            step = step / 2
+        raise self._failure("found no step that improves it")
+
+    def _look_for_separation(self, direction: Floats) -> None:
+        if self.regression.likelihood.family == "binomial":
+            refuse_separation(self.regression, self.scale, direction, self.engine, self.blocks, self.column)
+
+    def _failure(self, what: str) -> EstimationError:
+        return EstimationError(
+            f"{self.regression.what}: the fit {what}.",
+            mend="Look for very rare categories or nearly redundant covariates, and join or drop them; "
+            "for a ratio or a difference of a binary outcome with covariates, ask for an odds ratio.",
+        )

@@ -1,0 +1,1 @@
+"""Who is exposed: propensity models, balancing weights, trimming, overlap."""

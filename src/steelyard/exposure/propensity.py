@@ -1,0 +1,177 @@
+"""The propensity model: maximum pseudo-likelihood over the design rows, then the weights it makes."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from steelyard.data.blocks import Block, Rows
+from steelyard.data.passes import Engine
+from steelyard.errors import OverlapError
+from steelyard.estimate.fit import Fit, fit
+from steelyard.estimate.likelihood import Likelihood
+from steelyard.estimate.regression import Regression, model_moments
+from steelyard.estimate.separation import refuse_separating_columns
+from steelyard.estimate.weights import UnweightedFit, WeightColumns
+from steelyard.exposure.balancing import BalancedRows, Balancing
+from steelyard.plan import Exposure
+
+Floats = NDArray[np.float64]
+
+# Weights of this many columns are gathered at a time when caps are looked for.
+COLUMNS_GATHERED = 8
+
+
+def exposed(block: Block) -> Floats:
+    """Return the exposure as the response of a model, (n,)."""
+    return block.exposure
+
+
+def fit_propensity(rows: Rows, exposure: Exposure, sampling: WeightColumns, engine: Engine) -> Fit:
+    """Fit the propensity by maximum pseudo-likelihood (Binder 1983), under every column of weights.
+
+    Raises
+    ------
+    SeparationError
+        Covariates tell exposed and reference apart; the message names them.
+    EstimationError
+        The fit does not settle.
+    """
+    model = rows.exposure_model
+    regression = Regression(
+        names=model.names,
+        columns=model.of,
+        response=exposed,
+        weights=sampling if exposure.weighted else UnweightedFit(sampling),
+        likelihood=Likelihood("binomial", exposure.link),
+        intercept=model.intercept,
+        what="exposure model",
+    )
+    moments = model_moments(regression, engine, rows.blocks)
+    refuse_separating_columns(model.names, moments, rows.levels)
+    return fit(regression, moments, engine, rows.blocks)
+
+
+@dataclass(frozen=True)
+class PropensityInfluence:
+    """Influence of each row on the propensity's coefficients, on the columns' own scale."""
+
+    fit: Fit
+
+    def __call__(self, rows: BalancedRows) -> Floats:
+        """Return the (n, p) influences in a block's rows."""
+        size = len(self.fit.scaled)
+        return np.asarray(rows.nuisance_influence[:, :size] @ self.fit.scale.matrix().T)
+
+
+def balancing(
+    rows: Rows, exposure: Exposure, propensity: Fit, sampling: WeightColumns, engine: Engine
+) -> Balancing:
+    """Turn a fitted propensity into the plan's balancing weights: stabilized, trimmed and capped as asked.
+
+    The range is applied first, then the cap, at a quantile of the combined weights that are left.
+
+    Raises
+    ------
+    OverlapError
+        A propensity is so near 0 or 1 that its weight is not finite, or trimming leaves a group empty.
+    """
+    made = Balancing(
+        propensity,
+        sampling,
+        exposure.estimand,
+        exposure.weighted,
+        propensity_range=exposure.propensity_range,
+    )
+    if exposure.stabilize:
+        weighted, total = engine.run("share of the exposed", rows.blocks, _ShareKernel(sampling))
+        made = replace(made, share=weighted / total, total=total)
+    _refuse_empty_groups(rows, made, engine)
+    if exposure.cap_quantile is not None:
+        made = replace(made, cap=_caps(rows, made, exposure.cap_quantile, engine))
+    return made
+
+
+@dataclass(frozen=True)
+class _ShareKernel:
+    sampling: WeightColumns
+
+    def __call__(self, block: Block) -> tuple[Floats, Floats]:
+        weights = self.sampling(block)
+        return block.exposure @ weights, weights.sum(axis=0)
+
+
+@dataclass(frozen=True)
+class _GroupsKernel:
+    """Count, in the full sample, the rows with weight in each group and the weights that are not finite."""
+
+    balancing: Balancing
+
+    def __call__(self, block: Block) -> tuple[int, int, int]:
+        balanced = self.balancing.rows(block)
+        combined = balanced.combined[:, 0]
+        present = (combined > 0) & (block.weight > 0)
+        is_exposed = balanced.exposed[:, 0]
+        broken = ~np.isfinite(balanced.balancing[:, 0]) & (block.weight > 0)
+        return int((present & is_exposed).sum()), int((present & ~is_exposed).sum()), int(broken.sum())
+
+
+def _refuse_empty_groups(rows: Rows, made: Balancing, engine: Engine) -> None:
+    counts = engine.run("balancing weights", rows.blocks, _GroupsKernel(made))
+    if counts[2]:
+        raise OverlapError(
+            f"{counts[2]:,} row(s) have a propensity so near 0 or 1 that their {made.estimand} weight has no "
+            "finite value.",
+            mend='Ask for estimand = "ATO", set exposure.propensity_range, or simplify the exposure formula.',
+        )
+    for name, level, count in zip(("exposed", "reference"), rows.levels, counts[:2], strict=True):
+        if not count:
+            raise OverlapError(
+                f"No {name} row ({level}) that carries weight is left inside the propensity range "
+                f"{list(made.propensity_range or ())}.",
+                mend="Widen exposure.propensity_range.",
+            )
+
+
+@dataclass(frozen=True)
+class _CombinedKernel:
+    """The uncapped combined weights under the full sample's ``s``, and each replicate's multiplier."""
+
+    balancing: Balancing
+    columns: slice
+
+    def __call__(self, block: Block) -> list[tuple[Floats, Floats]]:
+        balanced = self.balancing.rows(block)
+        weight = block.weight[:, np.newaxis]
+        counted = block.weight > 0
+        multiplier = balanced.sampling[counted, self.columns] / weight[counted]
+        return [((weight * balanced.uncapped[:, self.columns])[counted], multiplier)]
+
+
+def _caps(rows: Rows, made: Balancing, quantile: float, engine: Engine) -> Floats:
+    """Return, for each column, the quantile of the positive combined weights."""
+    count = made.fit.scaled.shape[1]
+    caps = np.empty(count)
+    for first in range(0, count, COLUMNS_GATHERED):
+        some = slice(first, min(first + COLUMNS_GATHERED, count))
+        parts = engine.run("cap of the combined weights", rows.blocks, _CombinedKernel(made, some))
+        combined = np.concatenate([part[0] for part in parts])
+        multiplier = np.concatenate([part[1] for part in parts])
+        for j in range(combined.shape[1]):
+            caps[first + j] = _quantile(combined[:, j], multiplier[:, j], quantile)
+    return caps
+
+
+def _quantile(values: Floats, weight: Floats, quantile: float) -> float:
+    """Return the smallest positive value at which the cumulated weight reaches ``quantile`` of the total."""
+    counted = (values > 0) & (weight > 0)
+    if not counted.any():
+        return float("nan")
+    values, weight = values[counted], weight[counted]
+    order = np.argsort(values, kind="stable")
+    cumulated = np.cumsum(weight[order])
+    # The slack keeps a quantile that falls on a step from depending on rounding of the sum.
+    place = int(np.searchsorted(cumulated, quantile * cumulated[-1] * (1 - 1e-12)))
+    return float(values[order[min(place, len(order) - 1)]])

@@ -1,0 +1,1 @@
+"""What difference the exposure makes: weighted means and their contrasts, and weighted regression."""

@@ -1,0 +1,68 @@
+"""The effect as a contrast of the groups' weighted means: their difference, ratio or odds ratio."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from steelyard.data.blocks import Block
+from steelyard.data.passes import Engine
+from steelyard.estimate.estimates import Estimates
+from steelyard.estimate.likelihood import Likelihood
+from steelyard.exposure.balancing import Balancing
+from steelyard.exposure.group_means import GroupMeans, MeansInfluence, group_means
+from steelyard.exposure.weighing import AFTER
+from steelyard.outcome.measures import SCALES, refuse_undefined
+from steelyard.plan import Outcome
+
+Floats = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class OutcomeColumns:
+    """From a block to some of its columns, (n, m)."""
+
+    places: tuple[int, ...]
+
+    def __call__(self, block: Block) -> Floats:
+        """Return the block's columns."""
+        return block.columns[:, list(self.places)]
+
+
+def outcome_means(
+    names: tuple[str, ...],
+    places: tuple[int, ...],
+    balancing: Balancing,
+    engine: Engine,
+    blocks: Sequence[Block],
+) -> GroupMeans:
+    """Return the combined-weight means of the outcomes in each group."""
+    return group_means(names, OutcomeColumns(places), AFTER, balancing, engine, blocks)
+
+
+def contrast(outcome: Outcome, place: int, name: str, means: GroupMeans) -> Estimates:
+    """Return one outcome's contrast on the scale of its measure's link.
+
+    ``place`` is the outcome's place in ``means``. The difference of means is the coefficient of the
+    exposure in a weighted regression on exposure alone; the ratio and the odds ratio likewise, with
+    a log and a logit link.
+
+    Raises
+    ------
+    EstimationError
+        The measure is not defined for these means.
+    """
+    exposed, reference = means.means[0, place], means.means[1, place]
+    refuse_undefined(outcome, float(exposed[0]), float(reference[0]))
+    link = Likelihood("gaussian", SCALES[outcome.measure].link)
+    pick = np.zeros((1, len(means.names)))
+    pick[0, place] = 1
+    influence = MeansInfluence(
+        means, pick * link.predictor_slope(exposed[:1]), -pick * link.predictor_slope(reference[:1])
+    )
+    with np.errstate(divide="ignore", invalid="ignore"):
+        values = link.predictor(exposed) - link.predictor(reference)
+    return Estimates((name,), values[np.newaxis, :], influence)

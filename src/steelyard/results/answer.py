@@ -1,0 +1,102 @@
+"""Everything one run of a study found, as frames and small results that a report can draw from."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass
+
+import pandas as pd
+import pyarrow as pa
+
+from steelyard.data.checkup import Checkup
+from steelyard.plan import Plan
+from steelyard.results.estimates import EstimateResults, JointTest
+
+
+@dataclass(frozen=True)
+class Overlap:
+    """How far exposed and reference share the range of the propensity.
+
+    Attributes
+    ----------
+    histogram : frame
+        ``low``, ``high`` (propensity bin), and for each of the columns ``exposed_before``,
+        ``reference_before``, ``exposed_after``, ``reference_after`` the share (0..1) of the group's
+        sampling (before) or combined (after) weight in the bin; ``exposed_rows``, ``reference_rows``.
+    groups : frame, one row for each of ``exposed`` and ``reference``
+        ``group``, ``level`` (as spelled in the extract), ``rows``, ``sampling_weight`` (sum),
+        ``combined_weight`` (sum), ``effective_before``, ``effective_after`` (Kish), ``propensity_min``,
+        ``propensity_mean`` (sampling-weighted), ``propensity_max``, ``outside`` (rows outside the range
+        of the other group), ``largest_row_share`` and ``largest_psu_share`` (of the group's combined weight).
+    extremes : frame
+        ``propensity`` ("below 0.01", "below 0.05", "above 0.95", "above 0.99"), ``exposed_rows``,
+        ``reference_rows``.
+    target : text
+        The population that the estimand and the trimming leave as the target, in one or two sentences.
+    trimmed : mapping
+        What trimming did, "rows outside the propensity range" -> n, "rows capped" -> n; empty without.
+    """
+
+    histogram: pd.DataFrame
+    groups: pd.DataFrame
+    extremes: pd.DataFrame
+    target: str
+    trimmed: dict[str, int]
+
+
+@dataclass(frozen=True)
+class BalanceResults:
+    """The groups compared, before and after.
+
+    ``table`` has the columns of balance.csv (design.md section 5), and ``se_before``, ``se_after``,
+    ``mean_difference_before``, ``mean_difference_after`` beside them. ``joint_before`` and ``joint_after``
+    are the Wald F tests of all differences; ``over_identification`` is the chi-square test of the
+    propensity's moment conditions (None where the estimand leaves none to test, as for the ATO with a logit).
+    """
+
+    table: pd.DataFrame
+    joint_before: JointTest
+    joint_after: JointTest
+    over_identification: JointTest | None
+
+
+@dataclass(frozen=True)
+class Answer:
+    """What one run of a study found.
+
+    Attributes
+    ----------
+    plan : Plan
+    checkup : Checkup
+        The extract and the design as they were found.
+    propensity : EstimateResults
+        The coefficients of the exposure model with design-based covariance.
+    overlap : Overlap
+    balance : BalanceResults
+    effects : EstimateResults
+        One parameter for each outcome of the plan; ``effects.table`` has the columns of effects.csv.
+    effects_known : EstimateResults
+        The same with the propensity treated as known: what ignoring its estimation would have claimed.
+    sensitivity : frame
+        E-values: ``outcome``, ``measure``, ``risk_ratio`` (the ratio the E-value is for, exact or by the
+        published approximation), ``risk_ratio_low``, ``risk_ratio_high``, ``e_value``, ``e_value_limit``
+        (of the interval's limit nearer 1; 1 where the interval holds 1), ``approximation`` (text, empty
+        if exact).
+    warnings : texts, in the order in which they arose
+    record : dict
+        Versions, input digests, seeds, timings: what ``record.json`` says.
+    weights : callable
+        Gives the record batches of weights.parquet, in the order of the extract.
+    """
+
+    plan: Plan
+    checkup: Checkup
+    propensity: EstimateResults
+    overlap: Overlap
+    balance: BalanceResults
+    effects: EstimateResults
+    effects_known: EstimateResults
+    sensitivity: pd.DataFrame
+    warnings: tuple[str, ...]
+    record: dict[str, object]
+    weights: Callable[[], Iterator[pa.RecordBatch]]
