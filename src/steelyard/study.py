@@ -35,8 +35,7 @@ from steelyard.estimate.moments import MomentsKernel, merge_moments
 from steelyard.estimate.weights import FullSample, SamplingWeights
 from steelyard.exposure.balancing import Balancing
 from steelyard.exposure.group_means import group_means
-from steelyard.exposure.propensity import PropensityInfluence, balancing, fit_propensity
-from steelyard.exposure.weighing import AFTER, BEFORE
+from steelyard.exposure.propensity import balancing, coefficients, fit_propensity
 from steelyard.outcome.contrasts import OutcomeColumns, contrast
 from steelyard.outcome.effects import Effects, effects
 from steelyard.plan import Plan, plan_keys, read_plan
@@ -124,23 +123,24 @@ class Study(Plan):
             with watch("balance"):
                 moments = term_moments(columns, made, engine, blocks)
                 of_terms = partial(group_means, columns.labels, columns)
-                before = of_terms(BEFORE, made, engine, blocks).differences()
-                after = of_terms(AFTER, made, engine, blocks).differences()
+                before = of_terms("sampling", made, engine, blocks).differences()
+                after = of_terms("combined", made, engine, blocks).differences()
                 conditions = moment_conditions(made, engine, blocks)
                 apart = distances(columns, made, engine, blocks)
             with watch("effects"):
                 found = effects(rows, self.outcome, made, engine)
                 spreads = _outcome_spreads(rows, engine)
             with watch("variance"):
-                groups = _groups(self, fit, made, before, after, conditions, found)
+                groups = _groups(self, made, before, after, conditions, found)
                 inference = linearized(groups, made, design, rows, engine)
         balance = balance_of(columns, moments, apart, inference, self.exposure.estimand, design.df)
         known = self.variance.propensity == "known"
         as_asked = partial(
             effect_results, self, found, design=design, rows=len(rows), title=self.title or "Effects"
         )
-        estimated_effects = as_asked(*inference.of("effects"))
-        known_effects = as_asked(*inference.of("effects, propensity known"))
+        every = range(len(self.outcome))
+        estimated_effects = as_asked(*inference.of(*(f"effect {k}" for k in every)))
+        known_effects = as_asked(*inference.of(*(f"effect {k}, propensity known" for k in every)))
         headline = known_effects if known else estimated_effects
         told = (
             *rows.warnings,
@@ -195,7 +195,6 @@ def _engine(
 
 def _groups(
     plan: Plan,
-    fit: Fit,
     made: Balancing,
     before: Estimates,
     after: Estimates,
@@ -204,12 +203,13 @@ def _groups(
 ) -> dict[str, Estimates]:
     """Return everything whose covariance is wanted, by name; one pass gives it all."""
     groups = {
-        "propensity": Estimates(fit.regression.names, fit.coefficients, PropensityInfluence(fit)),
+        "propensity": coefficients(made),
         "before": before,
         "after": after,
-        "effects": _side_by_side(found.estimates),
-        "effects, propensity known": _side_by_side(found.known),
     }
+    for place, effect in enumerate(found.estimates):
+        groups[f"effect {place}"] = effect
+        groups[f"effect {place}, propensity known"] = effect.with_weights_known()
     if conditions is not None:
         groups["conditions"] = conditions
     for place in _ratio_places(plan, found):
@@ -238,22 +238,6 @@ def _ratios(plan: Plan, inference: Inference) -> dict[int, tuple[float, float]]:
             values, covariance = inference.of(f"ratio {place}")
             ratios[place] = float(values[0]), float(np.sqrt(max(covariance[0, 0], 0)))
     return ratios
-
-
-@dataclass(frozen=True)
-class _SideBySide:
-    parts: tuple[Any, ...]
-
-    def __call__(self, rows: Any) -> Any:
-        return np.column_stack([part(rows) for part in self.parts])
-
-
-def _side_by_side(estimates: tuple[Estimates, ...]) -> Estimates:
-    return Estimates(
-        tuple(name for e in estimates for name in e.names),
-        np.concatenate([e.values for e in estimates]),
-        _SideBySide(tuple(e.influence for e in estimates)),
-    )
 
 
 def _outcome_spreads(rows: Rows, engine: Engine) -> Any:

@@ -16,7 +16,7 @@ def test_moments_in_parts_are_those_of_the_whole(seed, size, shift):
     exposure = (rng.random(120) < 0.4).astype(float)
     exposure[:2], weight[:2] = (0, 1), 1
     parts = [
-        moments_of(values[i : i + size], weight[i : i + size], exposure[i : i + size])
+        moments_of(values[i : i + size], weight[i : i + size, None], exposure[i : i + size])[0]
         for i in range(0, 120, size)
     ]
     got = reduce(merge_moments, parts)

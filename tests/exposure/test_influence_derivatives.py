@@ -13,8 +13,8 @@ from steelyard.balance.conditions import moment_conditions
 from steelyard.data.passes import Engine
 from steelyard.estimate.estimates import Estimates
 from steelyard.exposure.group_means import group_means
-from steelyard.exposure.propensity import PropensityInfluence, balancing, fit_propensity
-from steelyard.exposure.weighing import AFTER, BEFORE
+from steelyard.exposure.influence import joint_influence
+from steelyard.exposure.propensity import balancing, coefficients, fit_propensity
 from steelyard.outcome.effects import effects
 from steelyard.plan import Exposure, Outcome
 
@@ -34,9 +34,14 @@ def perturbed():
     return ColumnsOfWeights(columns)
 
 
+def influence_of(estimates: Estimates, made, rows):
+    joint = joint_influence([estimates], made, ENGINE, rows.blocks)
+    return np.concatenate([joint(block) for block in rows.blocks])
+
+
 def check(estimates: Estimates, made, rows, rtol=1e-5):
     """The derivative of each estimate in a row's multiplier is its weight times its influence."""
-    influence = np.concatenate([estimates.influence(made.rows(block)) for block in rows.blocks])
+    influence = influence_of(estimates, made, rows)
     moved = (estimates.values[:, 1::2] - estimates.values[:, 2::2]) / (2 * STEP)
     expected = (S[:, None] * influence)[PROBED].T
     scale = np.abs(expected).max(axis=1, keepdims=True)
@@ -92,17 +97,17 @@ def balanced(request):
 
 
 def test_propensity_coefficients(balanced):
-    rows, fit, made = balanced
-    check(Estimates(fit.regression.names, fit.coefficients, PropensityInfluence(fit)), made, rows)
+    rows, _, made = balanced
+    check(coefficients(made), made, rows)
 
 
-@pytest.mark.parametrize("weighing", [BEFORE, AFTER], ids=["before", "after"])
+@pytest.mark.parametrize("weighing", ["sampling", "combined"])
 def test_differences_of_terms(balanced, weighing):
     rows, fit, made = balanced
     columns = TermColumns(rows.terms)
     differences = group_means(columns.labels, columns, weighing, made, ENGINE, rows.blocks).differences()
-    if weighing is AFTER and made.estimand == "ATO" and fit.regression.likelihood.link == "logit":
-        influence = np.concatenate([differences.influence(made.rows(b)) for b in rows.blocks])
+    if weighing == "combined" and made.estimand == "ATO" and fit.regression.likelihood.link == "logit":
+        influence = influence_of(differences, made, rows)
         np.testing.assert_allclose(differences.values, 0, atol=1e-9)
         np.testing.assert_allclose(S[:, None] * influence, 0, atol=1e-9)
     else:
@@ -121,7 +126,7 @@ def test_moment_conditions(balanced):
     if conditions is None:
         assert made.estimand == "ATO"
         return
-    influence = np.concatenate([conditions.influence(made.rows(block)) for block in rows.blocks])
+    influence = influence_of(conditions, made, rows)
     moved = (conditions.values[:, 1::2] - conditions.values[:, 2::2]) / (2 * STEP)
     expected = (S[:, None] * influence)[PROBED].T
     scale = np.abs(expected).max(axis=1, keepdims=True)
@@ -131,8 +136,8 @@ def test_moment_conditions(balanced):
 def test_known_propensity_leaves_the_estimates_and_drops_its_term(balanced):
     rows, _, made = balanced
     found = effects(rows, OUTCOMES, made, ENGINE)
-    for estimated, known in zip(found.estimates, found.known, strict=True):
+    for estimated in found.estimates:
+        known = estimated.with_weights_known()
         assert np.array_equal(estimated.values, known.values)
-        u = np.concatenate([estimated.influence(made.rows(b)) for b in rows.blocks])
-        v = np.concatenate([known.influence(made.rows(b)) for b in rows.blocks])
+        u, v = influence_of(estimated, made, rows), influence_of(known, made, rows)
         assert np.abs(u - v).max() > 1e-6 * np.abs(u).max()

@@ -19,7 +19,11 @@ class TermColumns:
     terms: tuple[Term, ...]
 
     def __call__(self, block: Block) -> Floats:
-        """Return the block's values."""
+        """Return the block's values; a view where they lie side by side."""
+        first, last = self.terms[0].index, self.terms[-1].index
+        plain = all(term.times is None for term in self.terms)
+        if plain and [term.index for term in self.terms] == list(range(first, last + 1)):
+            return block.columns[:, first : last + 1]
         values = block.columns[:, [term.index for term in self.terms]]
         for j, term in enumerate(self.terms):
             if term.times is not None:

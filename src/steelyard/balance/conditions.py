@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from steelyard.data.blocks import Block
 from steelyard.data.passes import Engine
-from steelyard.estimate.estimates import Estimates
+from steelyard.estimate.estimates import Estimates, Product
 from steelyard.exposure.balancing import BalancedRows, Balancing
 
 Floats = NDArray[np.float64]
@@ -31,32 +31,20 @@ def moment_conditions(balancing: Balancing, engine: Engine, blocks: Sequence[Blo
     regression = balancing.fit.regression
     if balancing.estimand == "ATO" and regression.likelihood.link == "logit":
         return None
-    values, drift = engine.run("balance: moment conditions", blocks, _ConditionsKernel(balancing))
-    return Estimates(regression.names, values, ConditionsInfluence(drift))
+    values = engine.run("balance: moment conditions", blocks, _ConditionsKernel(balancing))
+    return Estimates(regression.names, values, signed_columns, np.eye(len(values)), "pure")
 
 
-@dataclass(frozen=True)
-class ConditionsInfluence:
-    """Influence of each row on the balancing moments; ``drift`` (p, p) is their slope in the coefficients."""
-
-    drift: Floats
-
-    def __call__(self, rows: BalancedRows) -> Floats:
-        """Return the (n, p) influences in a block's rows."""
-        sign = np.where(rows.exposed, 1.0, -1.0)
-        influence: Floats = rows.columns * (sign * rows.pure[:, :1])
-        coefficients = self.drift.shape[1]
-        influence += rows.nuisance_influence[:, :coefficients] @ self.drift.T
-        return influence
+def signed_columns(rows: BalancedRows) -> list[Product]:
+    """Return the exposure model's columns, negative in the reference."""
+    return [(np.where(rows.exposed, 1.0, -1.0), rows.columns)]
 
 
 @dataclass(frozen=True)
 class _ConditionsKernel:
     balancing: Balancing
 
-    def __call__(self, block: Block) -> tuple[Floats, Floats]:
+    def __call__(self, block: Block) -> Floats:
         rows = self.balancing.rows(block)
         sign = np.where(rows.exposed, 1.0, -1.0)
-        values = rows.columns.T @ (rows.sampling * sign * rows.pure)
-        slope = block.weight * sign[:, 0] * rows.pure_slope
-        return values, rows.columns.T @ (rows.columns * slope[:, np.newaxis])
+        return np.asarray(rows.columns.T @ (rows.sampling * sign * rows.pure))

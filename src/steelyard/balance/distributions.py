@@ -56,11 +56,21 @@ def signed_shares(weight: Floats, exposure: Floats) -> Floats:
 
 
 def distance(values: Floats, shares: tuple[Floats, ...]) -> tuple[float, ...]:
-    """Return the largest gap between the groups' distribution functions, for each of several ``shares``."""
-    order = np.argsort(values, kind="stable")
+    """Return the largest gap between the groups' distribution functions, for each of several ``shares``, (n,)."""
+    low = values.min()
+    at_low = values == low
+    if np.all(at_low | (values == values.max())):
+        return tuple(0.0 if at_low.all() else float(abs(share[at_low].sum())) for share in shares)
+    order = np.argsort(values)
     ordered = values[order]
-    last_of_ties = np.flatnonzero(np.append(ordered[1:] != ordered[:-1], True))
-    return tuple(float(np.max(np.abs(np.cumsum(share[order])[last_of_ties]))) for share in shares)
+    last_of_ties = np.append(ordered[1:] != ordered[:-1], True)
+    tied = not last_of_ties.all()
+    found = []
+    for share in shares:
+        gap = np.cumsum(share[order])
+        gap = gap[last_of_ties] if tied else gap
+        found.append(float(max(gap.max(), -gap.min())))
+    return tuple(found)
 
 
 @dataclass(frozen=True)

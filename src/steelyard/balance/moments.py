@@ -53,8 +53,5 @@ class _TermMomentsKernel:
     balancing: Balancing
 
     def __call__(self, block: Block) -> TermMoments:
-        values, rows = self.columns(block), self.balancing.rows(block)
-        return TermMoments(
-            moments_of(values, block.weight, block.exposure),
-            moments_of(values, rows.combined[:, 0], block.exposure),
-        )
+        weights = np.column_stack([block.weight, self.balancing(block)[:, 0]])
+        return TermMoments(*moments_of(self.columns(block), weights, block.exposure))

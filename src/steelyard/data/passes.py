@@ -131,4 +131,4 @@ def threads(workers: int | None = None, progress: Progress = silent) -> Iterator
         else:
             stack.enter_context(threadpool_limits(limits=1, user_api="blas"))
         executor = stack.enter_context(ThreadPoolExecutor(workers)) if workers > 1 else None
-        yield Engine(executor, window=4 * workers, progress=progress)
+        yield Engine(executor, window=2 * workers, progress=progress)

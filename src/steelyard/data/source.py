@@ -19,7 +19,7 @@ import pyarrow.parquet as pq
 
 from steelyard.errors import ExtractError
 
-READ_ROWS = 65_536
+READ_ROWS = 16_384
 GLOB_SIGNS = frozenset("*?[")
 
 

@@ -12,6 +12,8 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from itertools import pairwise
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -23,7 +25,50 @@ from steelyard.design.survey import SurveyDesign, sampled_below
 
 Floats = NDArray[np.float64]
 Integers = NDArray[np.int64]
-Influence = Callable[[Block], Floats]
+Product = tuple[Floats, Floats]
+
+
+class Influence(Protocol):
+    """The influence of the rows of a block on k estimates, whole or in parts.
+
+    ``products(block)`` gives pairs of factors (n, J) and columns (n, q); their J q products, the factors'
+    columns outermost and the pairs one after another, times ``matrix`` (m, k) are the influence ``u``,
+    which calling the object with the block gives outright.
+    """
+
+    @property
+    def matrix(self) -> Floats:
+        """How the products combine, (m, k)."""
+        ...
+
+    def products(self, block: Block) -> list[Product]:
+        """Return the block's products."""
+        ...
+
+    def __call__(self, block: Block) -> Floats:
+        """Return the block's influence, (n, k)."""
+        ...
+
+
+@dataclass(frozen=True)
+class PlainInfluence:
+    """Any function from a block to (n, k) as an influence."""
+
+    function: Callable[[Block], Floats]
+    size: int
+
+    @property
+    def matrix(self) -> Floats:
+        """The identity: every product is an estimate's influence already."""
+        return np.eye(self.size)
+
+    def products(self, block: Block) -> list[Product]:
+        """Return the influence as one product with ones."""
+        return [(np.ones((len(block), 1)), self.function(block))]
+
+    def __call__(self, block: Block) -> Floats:
+        """Return the block's influence, (n, k)."""
+        return self.function(block)
 
 
 def covariance(
@@ -33,9 +78,9 @@ def covariance(
 
     Parameters
     ----------
-    influence : callable
-        From a block to ``u`` (n, k), with ``estimate - truth`` near ``sum(s u)``. Rows outside the domain
-        are in no block and count as zeros.
+    influence : Influence
+        Of ``u``, with ``estimate - truth`` near ``sum(s u)``. Rows outside the domain are in no block and
+        count as zeros.
 
     Notes
     -----
@@ -46,7 +91,7 @@ def covariance(
     last = min(design.stages, len(design.units.stages) - 1)
     unit = design.units.ancestor(last)
     kernel = _TotalsKernel(influence, unit, len(design.units.stages[last]))
-    totals = engine.run(what, rows.blocks, kernel, _Totals.merged).dense()
+    totals = engine.run(what, rows.blocks, kernel, _Totals.merged).dense() @ influence.matrix
     variance = np.zeros((totals.shape[1], totals.shape[1]))
     by_stage = [totals]
     for stage in range(last, 0, -1):
@@ -185,6 +230,10 @@ class _Totals:
         return values
 
 
+# Runs of rows of one unit this long on average are summed by a matrix product each; shorter ones together.
+LONG_RUN = 32
+
+
 @dataclass(frozen=True)
 class _TotalsKernel:
     influence: Influence
@@ -193,11 +242,24 @@ class _TotalsKernel:
 
     def __call__(self, block: Block) -> _Totals:
         unit = self.unit[block.unit]
-        first = int(unit.min(initial=self.count))
-        if not len(unit):
-            return _Totals(0, np.zeros((0, self.influence(block).shape[1])), self.count)
-        size = int(unit.max()) - first + 1
-        by_unit = sparse.csr_array(
-            (block.weight, (unit - first, np.arange(len(unit)))), shape=(size, len(unit))
-        )
-        return _Totals(first, np.asarray(by_unit @ self.influence(block)), self.count)
+        products = [(f * block.weight[:, np.newaxis], z) for f, z in self.influence.products(block)]
+        first, last = int(unit.min()), int(unit.max())
+        cuts = np.flatnonzero(np.diff(unit)) + 1
+        if (len(cuts) + 1) * LONG_RUN > len(unit):
+            return _Totals(first, _scattered(products, unit - first, last - first + 1), self.count)
+        values = np.zeros((last - first + 1, len(self.influence.matrix)))
+        edges = [0, *cuts.tolist(), len(unit)]
+        for a, b in pairwise(edges):
+            values[unit[a] - first] += np.concatenate([(f[a:b].T @ z[a:b]).ravel() for f, z in products])
+        return _Totals(first, values, self.count)
+
+
+def _scattered(products: list[Product], unit: Integers, size: int) -> Floats:
+    """Return the sums of products by unit, (size, m), for units in any order."""
+    places = (unit, np.arange(len(unit)))
+    parts = [
+        np.asarray(sparse.csr_array((f[:, j], places), shape=(size, len(unit))) @ z)
+        for f, z in products
+        for j in range(f.shape[1])
+    ]
+    return np.concatenate(parts, axis=1)

@@ -2,8 +2,8 @@
 
 Column 0 is solved by Newton's method. The other columns start at its solution and step together
 with its information factored once; a column that has not settled after a few such steps gets
-Newton steps of its own. Columns of the model are centred and scaled inside the fit, so neither
-their units nor the scale of the weights reaches the solver.
+Newton steps of its own. Columns of the model are centred and scaled inside the fit where their means
+or units could harm it.
 """
 
 from __future__ import annotations
@@ -34,7 +34,7 @@ class Fit:
     regression : Regression
     scale : Scale
     scaled : (p, K)
-        Coefficients of the centred and scaled columns, a column for each column of weights.
+        Coefficients of the columns on the fit's scale, a column for each column of weights.
     information : Factored
         The observed information of the full sample about them, at the solution.
     aliased : names of columns that others make redundant; their coefficients are zero
@@ -59,19 +59,8 @@ class Fit:
         return coefficients
 
     def columns(self, block: Block) -> Floats:
-        """Return the block's centred and scaled columns, (n, p)."""
+        """Return the block's columns on the fit's scale, (n, p)."""
         return self.scale(self.regression.columns(block))
-
-    def influence(self, block: Block, columns: Floats, eta: Floats) -> Floats:
-        """Return, for each row, its score under a weight of one, through the information; (n, p).
-
-        ``columns`` are those of :meth:`columns`, ``eta`` (n,) the full sample's linear predictor.
-        Multiplied by the row's fit weight and summed, it is the change of the scaled coefficients
-        (Binder 1983).
-        """
-        slope = self.regression.likelihood.score(self.regression.response(block), eta)
-        influence: Floats = columns @ self.information.inverse() * slope[:, np.newaxis]
-        return influence
 
 
 def fit(regression: Regression, moments: Moments, engine: Engine, blocks: Sequence[Block]) -> Fit:

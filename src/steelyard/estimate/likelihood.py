@@ -100,6 +100,8 @@ class Likelihood:
 
     def deviance(self, y: Floats, eta: Floats, weight: Floats) -> float:
         """Return the weighted deviance of some rows: what a fit makes small."""
+        if self.link == "logit":
+            return float(2 * weight @ np.logaddexp(0, np.where(y > 0.5, -eta, eta)))
         return float(self._family.deviance(y, self.mean(eta), freq_weights=weight))
 
     def admissible(self, eta: Floats) -> bool:

@@ -80,27 +80,36 @@ class Moments:
         )
 
 
-def moments_of(values: Floats, weight: Floats, exposure: Floats) -> Moments:
-    """Return the moments of the (n, q) ``values`` under the (n,) ``weight``, by ``exposure`` (n,)."""
-    width = values.shape[1]
-    counted = weight > 0
-    groups = (counted & (exposure == 1), counted & (exposure == 0))
+def moments_of(values: Floats, weights: Floats, exposure: Floats) -> tuple[Moments, ...]:
+    """Return the moments of (n, q) ``values`` by ``exposure`` (n,), under each column of (n, J) ``weights``.
+
+    Ranges and counts are those of the rows with weight in column 0.
+    """
+    width, several = values.shape[1], weights.shape[1]
     low, high = np.full((2, width), np.inf), np.full((2, width), -np.inf)
-    mean, sum_squares = np.zeros((2, width)), np.zeros((2, width))
-    present = np.zeros((2, width))
-    rows, total, squared = np.zeros(2), np.zeros(2), np.zeros(2)
-    for g, members in enumerate(groups):
-        if not members.any():
+    present, rows = np.zeros((2, width)), np.zeros(2)
+    mean, sum_squares = np.zeros((several, 2, width)), np.zeros((several, 2, width))
+    total, squared = np.zeros((several, 2)), np.zeros((several, 2))
+    for g, group in enumerate((exposure == 1, exposure == 0)):
+        members = np.flatnonzero(group & (weights[:, 0] > 0))
+        if not len(members):
             continue
-        z, w = values[members], weight[members]
-        rows[g], total[g], squared[g] = len(w), w.sum(), w @ w
+        z, w = values[members], weights[members]
+        rows[g] = len(members)
         low[g], high[g] = z.min(axis=0), z.max(axis=0)
         present[g] = np.count_nonzero(z, axis=0)
-        mean[g] = w @ z / total[g]
-        z = z - mean[g]
-        # The second term takes back what rounding of the mean put into the first.
-        sum_squares[g] = w @ z**2 - (w @ z) ** 2 / total[g]
-    return Moments(rows, total, squared, mean, np.maximum(sum_squares, 0), low, high, present)
+        total[:, g], squared[:, g] = w.sum(axis=0), np.einsum("ij,ij->j", w, w)
+        # Deviations from one centre serve every column of weights: the mean under the first is near them all.
+        centre = w[:, 0] @ z / total[0, g]
+        z -= centre
+        first = np.divide((w.T @ z).T, total[:, g], out=np.zeros((width, several)), where=total[:, g] > 0).T
+        z *= z
+        mean[:, g] = centre + first
+        sum_squares[:, g] = np.maximum(w.T @ z - total[:, g, np.newaxis] * first**2, 0)
+    return tuple(
+        Moments(rows, total[j], squared[j], mean[j], sum_squares[j], low, high, present)
+        for j in range(several)
+    )
 
 
 @dataclass(frozen=True)
@@ -112,7 +121,7 @@ class MomentsKernel:
 
     def __call__(self, block: Block) -> Moments:
         """Return the block's moments."""
-        return moments_of(self.values(block), self.weight(block), block.exposure)
+        return moments_of(self.values(block), self.weight(block)[:, np.newaxis], block.exposure)[0]
 
 
 def merge_moments(left: Moments, right: Moments) -> Moments:

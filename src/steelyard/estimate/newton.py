@@ -116,7 +116,7 @@ class Newton:
             except np.linalg.LinAlgError:
                 self._look_for_separation(b)
                 raise self._failure("lost its curvature") from None
-            size = float(np.max(np.abs(step), initial=0))
+            size = float(np.max(np.abs(step * self.scale.unit), initial=0))
             if size <= STEP_TOLERANCE:
                 return Solution(b + step, information, keep, taken)
             if taken > SUSPICIOUS_STEPS and size > 0.1 and size > 0.5 * previous:

@@ -34,21 +34,36 @@ class Regression:
     what: str
 
 
+# Means up to this many standard deviations, and standard deviations within this factor of 1, cost a
+# Cholesky factor no more than four digits: such columns are used as they are, without a copy.
+HARMLESS_MEAN, HARMLESS_SPREAD = 100.0, 1e4
+
+
 @dataclass(frozen=True)
 class Scale:
-    """The centring and scaling of a model's columns: ``(x - centre) / spread``, identity for the constant."""
+    """The scale a model's columns are put on: ``(x - centre) / spread``, identity for the constant.
 
-    centre: Floats
-    spread: Floats
+    ``unit`` (p,) is the spread of each column on that scale: one, or its own where columns are used as
+    they are (``centre`` and ``spread`` None).
+    """
+
+    unit: Floats
     intercept: int | None
+    centre: Floats | None = None
+    spread: Floats | None = None
 
     def __call__(self, columns: Floats) -> Floats:
-        """Return the (n, p) columns centred and scaled."""
-        scaled: Floats = (columns - self.centre) / self.spread
+        """Return the (n, p) columns on the scale."""
+        if self.centre is None or self.spread is None:
+            return columns
+        scaled = columns - self.centre
+        scaled /= self.spread
         return scaled
 
     def matrix(self) -> Floats:
-        """Return ``T`` (p, p) with ``beta = T b`` for scaled coefficients ``b``."""
+        """Return ``T`` (p, p) with ``beta = T b`` for coefficients ``b`` on the scale."""
+        if self.centre is None or self.spread is None:
+            return np.eye(len(self.unit))
         matrix = np.diag(1 / self.spread)
         if self.intercept is not None:
             matrix[self.intercept] -= self.centre / self.spread
@@ -62,12 +77,20 @@ def model_moments(regression: Regression, engine: Engine, blocks: Sequence[Block
 
 
 def model_scale(moments: Moments, intercept: int | None) -> Scale:
-    """Return the scale that gives every column a spread of one, and mean zero where there is a constant."""
+    """Return a scale on which the columns' means and spreads harm no solution.
+
+    Columns far from mean 0 and spread 1 are given spread one, and mean zero where there is a constant.
+    """
     mean, spread = moments.pooled()
     varies = moments.high.max(axis=0) > moments.low.min(axis=0)
     if intercept is None:
         # Without a constant, centring would change the model; the root mean square keeps the units out.
         spread = np.sqrt(spread**2 + mean**2)
-        return Scale(np.zeros_like(mean), np.where(spread > 0, spread, 1.0), None)
-    mean[intercept] = 0
-    return Scale(mean, np.where(varies & (spread > 0), spread, 1.0), intercept)
+        spread, mean = np.where(spread > 0, spread, 1.0), np.zeros_like(mean)
+    else:
+        mean[intercept] = 0
+        spread = np.where(varies & (spread > 0), spread, 1.0)
+    near = (np.abs(mean) <= HARMLESS_MEAN * spread) & (np.abs(np.log(spread)) <= np.log(HARMLESS_SPREAD))
+    if near.all():
+        return Scale(spread, intercept)
+    return Scale(np.ones_like(spread), intercept, mean, spread)

@@ -79,10 +79,10 @@ def refuse_separation(
     SeparationError
         Naming the columns with a part in it, and how many rows they settle.
     """
-    largest = np.max(np.abs(direction), initial=0)
-    if largest == 0:
+    reach = np.abs(direction * scale.unit)
+    if not reach.any():
         return
-    direction = np.where(np.abs(direction) > DIRECTION_TOLERANCE * largest, direction, 0) / largest
+    direction = np.where(reach > DIRECTION_TOLERANCE * reach.max(), direction, 0) / reach.max()
     against, settled, rows = engine.run(
         f"{regression.what}: separation", blocks, _DirectionKernel(regression, scale, direction, column)
     )

@@ -45,7 +45,7 @@ def solve_replicates(newton: Newton, b: Floats, information: Factored) -> tuple[
         step = information.solve(score)
         finite = np.isfinite(step).all(axis=0)
         coefficients[:, moving[finite]] += step[:, finite]
-        size = np.max(np.abs(step), axis=0, initial=0)
+        size = np.max(np.abs(step * newton.scale.unit[:, np.newaxis]), axis=0, initial=0)
         moving = moving[~(size <= STEP_TOLERANCE)]
     failed: dict[int, str] = {}
     for column in map(int, moving):

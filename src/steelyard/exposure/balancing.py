@@ -11,8 +11,10 @@ from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy import linalg
 
 from steelyard.data.blocks import Block
+from steelyard.estimate.estimates import Product
 from steelyard.estimate.fit import Fit
 from steelyard.estimate.weights import WeightColumns
 from steelyard.exposure.estimands import RULES
@@ -61,6 +63,12 @@ class Balancing:
     def nuisances(self) -> int:
         """How many nuisance parameters the weights hang on: coefficients, and the share if stabilized."""
         return len(self.fit.scaled) + (self.share is not None)
+
+    @property
+    def nuisance_combine(self) -> Floats:
+        """How the nuisance products of a row make its influence on the nuisance parameters; (P, P)."""
+        inverse = self.fit.information.inverse()
+        return inverse if self.share is None else linalg.block_diag(inverse, np.eye(1))
 
     def rows(self, block: Block) -> BalancedRows:
         """Return the block with everything that weighting makes of it, computed when asked for."""
@@ -174,28 +182,38 @@ class BalancedRows:
         return combined
 
     @cached_property
-    def slopes(self) -> Floats:
-        """Derivatives of the balancing weight in the nuisance parameters, full sample; (n, P)."""
-        free = ~(self.outside[:, 0] | self.capped[:, 0])
+    def _free(self) -> NDArray[np.bool_]:
+        """Rows of the full sample that neither the range nor the cap holds fixed, (n,)."""
+        return ~(self.outside[:, 0] | self.capped[:, 0])
+
+    @cached_property
+    def slope(self) -> Floats:
+        """Derivative of the balancing weight in the linear predictor, full sample; (n,)."""
         factor = np.broadcast_to(self.stabilizer, self.propensity.shape)[:, 0]
-        in_coefficients = self.columns * (self.pure_slope * factor * free)[:, np.newaxis]
+        return np.asarray(self.pure_slope * factor * self._free)
+
+    @cached_property
+    def share_slope(self) -> Floats:
+        """Derivative of the balancing weight in the stabilizing share, full sample; (n,)."""
         if self.plan.share is None:
-            return np.asarray(in_coefficients)
+            return np.zeros(len(self.block))
         rule, share = self.balancing_rule, self.plan.share[:1]
         log_slope = np.where(
             self.exposed[:, 0], rule.exposed_share_slope(share), rule.reference_share_slope(share)
         )
-        return np.asarray(np.column_stack([in_coefficients, self.balancing[:, 0] * log_slope * free]))
+        return np.asarray(self.balancing[:, 0] * log_slope * self._free)
 
     @cached_property
-    def nuisance_influence(self) -> Floats:
-        """Influence of each row on the nuisance parameters, so that ``sum(s u)`` is their error; (n, P)."""
-        influence = self.plan.fit.influence(self.block, self.columns, self.eta[:, 0])
+    def nuisance_products(self) -> list[Product]:
+        """Products that :attr:`Balancing.nuisance_combine` makes the rows' influence on the nuisances."""
+        regression = self.plan.fit.regression
+        score = regression.likelihood.score(self.block.exposure, self.eta[:, 0])
         if not self.plan.weighted:
             weight = self.block.weight
-            influence *= np.divide(1, weight, out=np.zeros_like(weight), where=weight > 0)[:, np.newaxis]
-        if self.plan.share is None:
-            return np.asarray(influence)
-        assert self.plan.total is not None
-        in_share = (self.block.exposure - self.plan.share[0]) / self.plan.total[0]
-        return np.column_stack([influence, in_share])
+            score = np.divide(score, weight, out=np.zeros_like(weight), where=weight > 0)
+        products: list[Product] = [(score[:, np.newaxis], self.columns)]
+        if self.plan.share is not None:
+            assert self.plan.total is not None
+            in_share = (self.block.exposure - self.plan.share[0]) / self.plan.total[0]
+            products.append((in_share[:, np.newaxis], np.ones((len(self.block), 1))))
+        return products

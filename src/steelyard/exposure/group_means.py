@@ -3,16 +3,16 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
 from steelyard.data.blocks import Block
 from steelyard.data.passes import Engine
-from steelyard.estimate.estimates import Estimates
+from steelyard.estimate.estimates import Estimates, Product, Weighing
 from steelyard.exposure.balancing import BalancedRows, Balancing
-from steelyard.exposure.weighing import Weighing
+from steelyard.exposure.weighing import weights
 
 Floats = NDArray[np.float64]
 
@@ -25,13 +25,10 @@ class GroupMeans:
     ----------
     names : q texts
     columns : callable from a block to (n, q)
-    weighing : Weighing
+    weighing : "sampling" or "combined"
     means : (2, q, K)
     weight : (2, K)
         Sums of the weights.
-    drift : (2, q, P)
-        Derivatives of the full sample's means in the nuisance parameters; zero before balancing, and
-        where the propensity counts as known.
     """
 
     names: tuple[str, ...]
@@ -39,46 +36,63 @@ class GroupMeans:
     weighing: Weighing
     means: Floats
     weight: Floats
-    drift: Floats
-
-    def known(self) -> GroupMeans:
-        """Return the same means with the propensity taken as known."""
-        return replace(self, weighing=replace(self.weighing, known=True))
 
     def differences(self) -> Estimates:
         """Return exposed minus reference, q estimates."""
-        influence = MeansInfluence(self, np.eye(len(self.names)), -np.eye(len(self.names)))
-        return Estimates(self.names, self.means[0] - self.means[1], influence)
+        values = self.means[0] - self.means[1]
+        return self.contrasts(self.names, values, np.ones(len(self.names)), -np.ones(len(self.names)))
+
+    def contrasts(
+        self, names: tuple[str, ...], values: Floats, of_exposed: Floats, of_reference: Floats
+    ) -> Estimates:
+        """Return functions of the means, one a column, given their derivatives in both means; (q,) each.
+
+        Notes
+        -----
+        For group ``a`` with weights ``w = s c``: ``u_i = c_i 1(A_i = a) (z_i - m_a) / sum_a w``, plus what the
+        propensity's coefficients bring (Lunceford & Davidian 2004; Zeng, Li & Tong 2025).
+        """
+        means, weight = self.means[:, :, 0], self.weight[:, 0]
+        size = len(self.names)
+        combine = np.concatenate(
+            [
+                np.diag(of_exposed / weight[0]),
+                np.diag(of_reference / weight[1]),
+                [-means[0] * of_exposed / weight[0]],
+                [-means[1] * of_reference / weight[1]],
+            ]
+        )
+        if np.array_equal(of_exposed, -of_reference):
+            # One factor serves both groups: a third of the products less for the commonest contrast.
+            combine = np.concatenate([np.diag(of_exposed), combine[2 * size :]])
+            return Estimates(names, values, DifferenceProducts(self.columns, weight), combine, self.weighing)
+        return Estimates(names, values, GroupProducts(self.columns), combine, self.weighing)
 
 
 @dataclass(frozen=True)
-class MeansInfluence:
-    """Influence of linear functions of the group means: ``of_exposed @ m1 + of_reference @ m0``; (k, q) each.
+class GroupProducts:
+    """Each column, and a one, in the exposed and in the reference apart."""
 
-    Notes
-    -----
-    For group ``a`` with weights ``w = s c`` and nuisance parameters ``g`` (the propensity's coefficients):
-    ``u_i = c_i 1(A_i = a) (z_i - m_a) / sum_a w + (dm_a/dg) u_i(g)`` (Lunceford & Davidian 2004;
-    Zeng, Li & Tong 2025).
-    """
+    columns: Callable[[Block], Floats]
 
-    group_means: GroupMeans
-    of_exposed: Floats
-    of_reference: Floats
+    def __call__(self, rows: BalancedRows) -> list[Product]:
+        """Return the products of a block's rows."""
+        groups = np.concatenate([rows.exposed, ~rows.exposed], axis=1).astype(np.float64)
+        return [(groups, self.columns(rows.block)), (groups, np.ones((len(groups), 1)))]
 
-    def __call__(self, rows: BalancedRows) -> Floats:
-        """Return the (n, k) influences in a block's rows."""
-        means, weight = self.group_means.means[:, :, 0], self.group_means.weight[:, 0]
-        z = self.group_means.columns(rows.block)
-        is_exposed = rows.exposed
-        relative = self.group_means.weighing.relative(rows)[:, np.newaxis]
-        own = relative * np.where(is_exposed, (z - means[0]) / weight[0], (z - means[1]) / weight[1])
-        influence = np.where(is_exposed, own @ self.of_exposed.T, own @ self.of_reference.T)
-        if self.group_means.weighing.estimated():
-            drift = self.group_means.drift
-            both = self.of_exposed @ drift[0] + self.of_reference @ drift[1]
-            influence += rows.nuisance_influence @ both.T
-        return np.asarray(influence)
+
+@dataclass(frozen=True)
+class DifferenceProducts:
+    """Each column over its group's weight, negative in the reference; and ones, by group."""
+
+    columns: Callable[[Block], Floats]
+    weight: Floats
+
+    def __call__(self, rows: BalancedRows) -> list[Product]:
+        """Return the products of a block's rows."""
+        signed = np.where(rows.exposed, 1 / self.weight[0], -1 / self.weight[1])
+        groups = np.concatenate([rows.exposed, ~rows.exposed], axis=1).astype(np.float64)
+        return [(signed, self.columns(rows.block)), (groups, np.ones((len(groups), 1)))]
 
 
 def group_means(
@@ -90,15 +104,10 @@ def group_means(
     blocks: Sequence[Block],
 ) -> GroupMeans:
     """Return the weighted means of ``columns`` in each group, under every column of weights."""
-    what = "means, combined weights" if weighing.combined else "means, sampling weights"
-    sums, weight = engine.run(what, blocks, _SumsKernel(columns, weighing, balancing))
+    sums, weight = engine.run(f"means, {weighing} weights", blocks, _SumsKernel(columns, weighing, balancing))
     with np.errstate(divide="ignore", invalid="ignore"):
         means = sums / weight[:, np.newaxis, :]
-    drift = np.zeros((2, len(names), balancing.nuisances))
-    if weighing.estimated():
-        kernel = _DriftKernel(columns, balancing, means[:, :, 0])
-        drift = engine.run("means, propensity estimated", blocks, kernel) / weight[:, :1, np.newaxis]
-    return GroupMeans(names, columns, weighing, means, weight, drift)
+    return GroupMeans(names, columns, weighing, means, weight)
 
 
 @dataclass(frozen=True)
@@ -109,27 +118,8 @@ class _SumsKernel:
 
     def __call__(self, block: Block) -> tuple[Floats, Floats]:
         rows = self.balancing.rows(block)
-        weights, z = self.weighing.weights(rows), self.columns(block)
-        of_exposed = np.where(rows.exposed, weights, 0)
-        of_reference = np.where(rows.exposed, 0, weights)
-        return (
-            np.stack([z.T @ of_exposed, z.T @ of_reference]),
-            np.stack([of_exposed.sum(axis=0), of_reference.sum(axis=0)]),
-        )
-
-
-@dataclass(frozen=True)
-class _DriftKernel:
-    """Sums of ``s (dc/dg) (z - m_a)`` by group, (2, q, P)."""
-
-    columns: Callable[[Block], Floats]
-    balancing: Balancing
-    means: Floats
-
-    def __call__(self, block: Block) -> Floats:
-        rows = self.balancing.rows(block)
-        z, slopes = self.columns(block), rows.slopes
-        gap = block.weight[:, np.newaxis] * (z - np.where(rows.exposed, self.means[0], self.means[1]))
-        return np.stack(
-            [np.where(rows.exposed, gap, 0).T @ slopes, np.where(rows.exposed, 0, gap).T @ slopes]
-        )
+        under, z = weights(rows, self.weighing), self.columns(block)
+        count = under.shape[1]
+        both = np.concatenate([np.where(rows.exposed, under, 0), np.where(rows.exposed, 0, under)], axis=1)
+        sums = z.T @ both
+        return np.stack([sums[:, :count], sums[:, count:]]), both.sum(axis=0).reshape(2, count)

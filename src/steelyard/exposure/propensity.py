@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 from steelyard.data.blocks import Block, Rows
 from steelyard.data.passes import Engine
 from steelyard.errors import OverlapError
+from steelyard.estimate.estimates import Estimates, Product
 from steelyard.estimate.fit import Fit, fit
 from steelyard.estimate.likelihood import Likelihood
 from steelyard.estimate.regression import Regression, model_moments
@@ -54,16 +55,24 @@ def fit_propensity(rows: Rows, exposure: Exposure, sampling: WeightColumns, engi
     return fit(regression, moments, engine, rows.blocks)
 
 
-@dataclass(frozen=True)
-class PropensityInfluence:
-    """Influence of each row on the propensity's coefficients, on the columns' own scale."""
+def coefficients(made: Balancing) -> Estimates:
+    """Return the propensity's coefficients, on the columns' own scale, as estimates."""
+    size = len(made.fit.scaled)
+    of_nuisance = np.zeros((made.nuisances, size))
+    of_nuisance[:size] = made.fit.scale.matrix().T
+    return Estimates(
+        made.fit.regression.names,
+        made.fit.coefficients,
+        no_products,
+        np.zeros((0, size)),
+        "sampling",
+        of_nuisance,
+    )
 
-    fit: Fit
 
-    def __call__(self, rows: BalancedRows) -> Floats:
-        """Return the (n, p) influences in a block's rows."""
-        size = len(self.fit.scaled)
-        return np.asarray(rows.nuisance_influence[:, :size] @ self.fit.scale.matrix().T)
+def no_products(rows: BalancedRows) -> list[Product]:
+    """Return no products: these estimates are the nuisance parameters, whose influence is there already."""
+    return []
 
 
 def balancing(

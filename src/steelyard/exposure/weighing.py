@@ -1,61 +1,30 @@
-"""Under which weights something is computed: the sampling weights ("before") or the combined ("after")."""
+"""Relative weights of rows under each weighing, and how they move with the nuisance parameters."""
 
 from __future__ import annotations
-
-from collections.abc import Callable, Sequence
-from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
-from steelyard.data.blocks import Block
-from steelyard.estimate.estimates import Estimates
-from steelyard.exposure.balancing import BalancedRows, Balancing
+from steelyard.estimate.estimates import Weighing
+from steelyard.exposure.balancing import BalancedRows
 
 Floats = NDArray[np.float64]
 
 
-@dataclass(frozen=True)
-class Weighing:
-    """The sampling weights alone, or the combined ones.
-
-    ``known`` treats the combined weights as if the propensity had been known: what is computed does not
-    change, its influence loses the term through the propensity.
-    """
-
-    combined: bool
-    known: bool = False
-
-    def weights(self, rows: BalancedRows) -> Floats:
-        """Return the weights, (n, K)."""
-        return rows.combined if self.combined else rows.sampling
-
-    def relative(self, rows: BalancedRows) -> Floats:
-        """Return the full sample's weights over the sampling weights, (n,)."""
-        return rows.balancing[:, 0] if self.combined else np.ones(len(rows.block))
-
-    def estimated(self) -> bool:
-        """Whether the weights carry an estimated propensity into the influence."""
-        return self.combined and not self.known
+def weights(rows: BalancedRows, weighing: Weighing) -> Floats:
+    """Return the weights under a weighing, (n, K)."""
+    return {"sampling": rows.sampling, "combined": rows.combined}[weighing]
 
 
-BEFORE = Weighing(combined=False)
-AFTER = Weighing(combined=True)
+def relative_weight(rows: BalancedRows, weighing: Weighing) -> Floats:
+    """Return the full sample's weights over the sampling weights, (n,)."""
+    if weighing == "sampling":
+        return np.ones(len(rows.block))
+    return np.asarray((rows.balancing if weighing == "combined" else rows.pure)[:, 0])
 
 
-@dataclass(frozen=True)
-class StackedInfluence:
-    """The influences of several estimators side by side, on the same balanced rows; block -> (n, sum k)."""
-
-    balancing: Balancing
-    parts: tuple[Callable[[BalancedRows], Floats], ...]
-
-    def __call__(self, block: Block) -> Floats:
-        """Return the block's influences."""
-        rows = self.balancing.rows(block)
-        return np.column_stack([part(rows) for part in self.parts])
-
-
-def stacked(balancing: Balancing, estimates: Sequence[Estimates]) -> StackedInfluence:
-    """Return one influence for all ``estimates``, so that one pass gives their joint covariance."""
-    return StackedInfluence(balancing, tuple(e.influence for e in estimates))
+def weight_slopes(rows: BalancedRows, weighing: Weighing) -> tuple[Floats, Floats]:
+    """Return the relative weight's derivatives in the linear predictor and in the stabilizing share, (n,) each."""
+    if weighing == "combined":
+        return rows.slope, rows.share_slope
+    return rows.pure_slope, np.zeros(len(rows.block))

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,8 +13,7 @@ from steelyard.data.passes import Engine
 from steelyard.estimate.estimates import Estimates
 from steelyard.estimate.likelihood import Likelihood
 from steelyard.exposure.balancing import Balancing
-from steelyard.exposure.group_means import GroupMeans, MeansInfluence, group_means
-from steelyard.exposure.weighing import AFTER
+from steelyard.exposure.group_means import GroupMeans, group_means
 from steelyard.outcome.measures import SCALES, refuse_undefined
 from steelyard.plan import Outcome
 
@@ -28,7 +27,10 @@ class OutcomeColumns:
     places: tuple[int, ...]
 
     def __call__(self, block: Block) -> Floats:
-        """Return the block's columns."""
+        """Return the block's columns; a view where they lie side by side."""
+        first, last = self.places[0], self.places[-1]
+        if self.places == tuple(range(first, last + 1)):
+            return block.columns[:, first : last + 1]
         return block.columns[:, list(self.places)]
 
 
@@ -40,15 +42,15 @@ def outcome_means(
     blocks: Sequence[Block],
 ) -> GroupMeans:
     """Return the combined-weight means of the outcomes in each group."""
-    return group_means(names, OutcomeColumns(places), AFTER, balancing, engine, blocks)
+    return group_means(names, OutcomeColumns(places), "combined", balancing, engine, blocks)
 
 
 def contrast(outcome: Outcome, place: int, name: str, means: GroupMeans) -> Estimates:
     """Return one outcome's contrast on the scale of its measure's link.
 
-    ``place`` is the outcome's place in ``means``. The difference of means is the coefficient of the
-    exposure in a weighted regression on exposure alone; the ratio and the odds ratio likewise, with
-    a log and a logit link.
+    ``place`` is the outcome's place in ``means``, which are those of :func:`outcome_means`. The difference of
+    means is the coefficient of the exposure in a weighted regression on exposure alone; the ratio and the
+    odds ratio likewise, with a log and a logit link.
 
     Raises
     ------
@@ -57,12 +59,13 @@ def contrast(outcome: Outcome, place: int, name: str, means: GroupMeans) -> Esti
     """
     exposed, reference = means.means[0, place], means.means[1, place]
     refuse_undefined(outcome, float(exposed[0]), float(reference[0]))
+    assert isinstance(means.columns, OutcomeColumns)
+    column = means.columns.places[place]
     link = Likelihood("gaussian", SCALES[outcome.measure].link)
-    pick = np.zeros((1, len(means.names)))
-    pick[0, place] = 1
-    influence = MeansInfluence(
-        means, pick * link.predictor_slope(exposed[:1]), -pick * link.predictor_slope(reference[:1])
-    )
+    of_exposed, of_reference = link.predictor_slope(exposed[:1]), -link.predictor_slope(reference[:1])
     with np.errstate(divide="ignore", invalid="ignore"):
         values = link.predictor(exposed) - link.predictor(reference)
-    return Estimates((name,), values[np.newaxis, :], influence)
+    alone = replace(
+        means, names=(name,), columns=OutcomeColumns((column,)), means=means.means[:, place : place + 1]
+    )
+    return alone.contrasts((name,), values[np.newaxis, :], of_exposed, of_reference)

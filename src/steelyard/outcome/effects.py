@@ -24,15 +24,13 @@ class Effects:
     outcomes : m outcomes of the plan
     means : GroupMeans
         Of the m outcomes, under the combined weights.
-    estimates, known : m Estimates each, one effect apiece, on the scale of the measure's link
-        ``known`` takes the propensity as known: same values, other influence.
+    estimates : m Estimates of one effect each, on the scale of the measure's link
     regressions : for each outcome its OutcomeRegression, or None where it has no covariates
     """
 
     outcomes: tuple[Outcome, ...]
     means: GroupMeans
     estimates: tuple[Estimates, ...]
-    known: tuple[Estimates, ...]
     regressions: tuple[OutcomeRegression | None, ...]
 
 
@@ -46,17 +44,15 @@ def effects(rows: Rows, outcomes: tuple[Outcome, ...], balancing: Balancing, eng
     """
     names = tuple(outcome_label(outcome, outcomes) for outcome in outcomes)
     means = outcome_means(names, rows.outcomes, balancing, engine, rows.blocks)
-    estimates, known, regressions = [], [], []
+    estimates, regressions = [], []
     for place, (outcome, name, model) in enumerate(zip(outcomes, names, rows.outcome_models, strict=True)):
         if model is None:
             regression = None
             estimates.append(contrast(outcome, place, name, means))
-            known.append(contrast(outcome, place, name, means.known()))
         else:
             regression = outcome_regression(
                 outcome, name, rows.outcomes[place], model, balancing, engine, rows.blocks
             )
             estimates.append(regression.effect())
-            known.append(regression.known().effect())
         regressions.append(regression)
-    return Effects(outcomes, means, tuple(estimates), tuple(known), tuple(regressions))
+    return Effects(outcomes, means, tuple(estimates), tuple(regressions))

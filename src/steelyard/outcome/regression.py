@@ -11,12 +11,11 @@ from numpy.typing import NDArray
 from steelyard.data.blocks import Block, Model
 from steelyard.data.passes import Engine
 from steelyard.errors import PlanError
-from steelyard.estimate.estimates import Estimates
+from steelyard.estimate.estimates import Estimates, Product
 from steelyard.estimate.fit import Fit, fit
 from steelyard.estimate.likelihood import Likelihood
 from steelyard.estimate.regression import Regression, model_moments
 from steelyard.exposure.balancing import BalancedRows, Balancing
-from steelyard.exposure.weighing import AFTER, Weighing
 from steelyard.outcome.measures import SCALES
 from steelyard.plan import Outcome
 
@@ -47,51 +46,41 @@ class OutcomeColumn:
 
 @dataclass(frozen=True)
 class OutcomeRegression:
-    """A solved outcome model, and how its score drifts with the nuisance parameters; ``drift`` (p + 1, P)."""
+    """A solved outcome model under the combined weights."""
 
     name: str
     fit: Fit
-    drift: Floats
-    weighing: Weighing = AFTER
-
-    def known(self) -> OutcomeRegression:
-        """Return the same model with the propensity taken as known."""
-        return replace(self, weighing=replace(self.weighing, known=True))
 
     def coefficients(self) -> Estimates:
-        """Return every coefficient: the covariates', then the exposure's."""
+        """Return every coefficient: the covariates', then the exposure's.
+
+        Notes
+        -----
+        ``u_i = J^-1 c_i score_i x_i``, plus what the propensity's coefficients bring, with ``J`` the observed
+        information under the combined weights (Binder 1983; Lunceford & Davidian 2004).
+        """
+        combine = self.fit.information.inverse() @ self.fit.scale.matrix().T
         names = self.fit.regression.names
-        return Estimates(names, self.fit.coefficients, RegressionInfluence(self, np.arange(len(names))))
+        return Estimates(names, self.fit.coefficients, Scores(self.fit), combine, "combined")
 
     def effect(self) -> Estimates:
         """Return the exposure's coefficient."""
-        last = np.array([len(self.fit.scaled) - 1])
-        return Estimates((self.name,), self.fit.coefficients[last], RegressionInfluence(self, last))
+        every = self.coefficients()
+        return replace(every, names=(self.name,), values=every.values[-1:], combine=every.combine[:, -1:])
 
 
 @dataclass(frozen=True)
-class RegressionInfluence:
-    """Influence of each row on some coefficients of an outcome model.
+class Scores:
+    """Each row's score under a weight of one, as one product of the model's columns."""
 
-    Notes
-    -----
-    ``u_i = J^-1 [c_i score_i x_i + G u_i(g)]``, with ``J`` the observed information under the combined
-    weights and ``G = sum s score x (dc/dg)'`` the drift of the estimating equation with the propensity's
-    coefficients ``g`` (stacked estimating equations: Binder 1983; Lunceford & Davidian 2004).
-    """
+    fit: Fit
 
-    regression: OutcomeRegression
-    places: NDArray[np.intp]
-
-    def __call__(self, rows: BalancedRows) -> Floats:
-        """Return the (n, k) influences in a block's rows."""
-        fitted, weighing = self.regression.fit, self.regression.weighing
-        columns = fitted.columns(rows.block)
-        eta = columns @ fitted.scaled[:, 0]
-        influence = fitted.influence(rows.block, columns, eta) * weighing.relative(rows)[:, np.newaxis]
-        if weighing.estimated():
-            influence += rows.nuisance_influence @ fitted.information.solve(self.regression.drift).T
-        return np.asarray(influence @ fitted.scale.matrix()[self.places].T)
+    def __call__(self, rows: BalancedRows) -> list[Product]:
+        """Return the products of a block's rows."""
+        columns = self.fit.columns(rows.block)
+        regression = self.fit.regression
+        score = regression.likelihood.score(regression.response(rows.block), columns @ self.fit.scaled[:, 0])
+        return [(score[:, np.newaxis], columns)]
 
 
 def outcome_regression(
@@ -135,20 +124,4 @@ def outcome_regression(
             f'outcome "{outcome.name}": the covariates "{outcome.covariates}" determine the exposure.',
             mend="Take the exposure, or what is computed from it, out of the covariates.",
         )
-    drift = engine.run(
-        f'outcome model of "{outcome.name}": propensity estimated', blocks, _DriftKernel(fitted, balancing)
-    )
-    return OutcomeRegression(name, fitted, drift)
-
-
-@dataclass(frozen=True)
-class _DriftKernel:
-    fitted: Fit
-    balancing: Balancing
-
-    def __call__(self, block: Block) -> Floats:
-        rows = self.balancing.rows(block)
-        columns = self.fitted.columns(block)
-        regression = self.fitted.regression
-        slope = regression.likelihood.score(regression.response(block), columns @ self.fitted.scaled[:, 0])
-        return np.asarray((columns * (block.weight * slope)[:, np.newaxis]).T @ rows.slopes)
+    return OutcomeRegression(name, fitted)

@@ -14,7 +14,7 @@ from steelyard.design.linearization import covariance
 from steelyard.design.survey import SurveyDesign
 from steelyard.estimate.estimates import Estimates
 from steelyard.exposure.balancing import Balancing
-from steelyard.exposure.weighing import stacked
+from steelyard.exposure.influence import joint_influence
 
 Floats = NDArray[np.float64]
 
@@ -23,21 +23,21 @@ Floats = NDArray[np.float64]
 class Inference:
     """Named groups of estimates with their joint design-based covariance.
 
-    ``of(name)`` gives a group's full-sample values (k,) and their covariance (k, k).
+    ``of(name, ...)`` gives the full-sample values (k,) of one or more groups and their covariance (k, k).
     """
 
     estimates: Mapping[str, Estimates]
     joint: Floats
 
-    def of(self, name: str) -> tuple[Floats, Floats]:
-        """Return a group's values and covariance."""
-        first = 0
-        for other, estimates in self.estimates.items():
-            if other == name:
-                places = slice(first, first + len(estimates.names))
-                return estimates.full_sample, self.joint[places, places]
-            first += len(estimates.names)
-        raise KeyError(name)
+    def of(self, *names: str) -> tuple[Floats, Floats]:
+        """Return the values and the covariance of some groups together."""
+        ends = np.cumsum([len(estimates.names) for estimates in self.estimates.values()])
+        end = dict(zip(self.estimates, ends.tolist(), strict=True))
+        places = np.concatenate(
+            [np.arange(end[name] - len(self.estimates[name].names), end[name]) for name in names]
+        )
+        values = np.concatenate([self.estimates[name].full_sample for name in names])
+        return values, self.joint[np.ix_(places, places)]
 
 
 def linearized(
@@ -47,6 +47,6 @@ def linearized(
     rows: Rows,
     engine: Engine,
 ) -> Inference:
-    """Return the linearized covariance of all groups of estimates, from one pass over their influences."""
-    influence = stacked(balancing, list(estimates.values()))
+    """Return the linearized covariance of all groups of estimates together."""
+    influence = joint_influence(list(estimates.values()), balancing, engine, rows.blocks)
     return Inference(estimates, covariance(design, rows, engine, influence, "linearized variance"))
