@@ -31,7 +31,7 @@ from steelyard.design.survey import SurveyDesign, survey_design
 from steelyard.errors import PlanError, SteelyardWarning
 from steelyard.estimate.estimates import Estimates
 from steelyard.estimate.fit import Fit
-from steelyard.estimate.moments import MomentsKernel, merge_moments
+from steelyard.estimate.moments import Moments, MomentsKernel, merge_moments
 from steelyard.estimate.weights import FullSample, SamplingWeights
 from steelyard.exposure.balancing import Balancing
 from steelyard.exposure.group_means import group_means
@@ -129,14 +129,20 @@ class Study(Plan):
                 apart = distances(columns, made, engine, blocks)
             with watch("effects"):
                 found = effects(rows, self.outcome, made, engine)
-                spreads = _outcome_spreads(rows, engine)
+                outcomes = _outcome_moments(rows, engine)
             with watch("variance"):
                 groups = _groups(self, made, before, after, conditions, found)
                 inference = linearized(groups, made, design, rows, engine)
         balance = balance_of(columns, moments, apart, inference, self.exposure.estimand, design.df)
         known = self.variance.propensity == "known"
         as_asked = partial(
-            effect_results, self, found, design=design, rows=len(rows), title=self.title or "Effects"
+            effect_results,
+            self,
+            found,
+            design=design,
+            rows=len(rows),
+            outcomes=outcomes,
+            title=self.title or "Effects",
         )
         every = range(len(self.outcome))
         estimated_effects = as_asked(*inference.of(*(f"effect {k}" for k in every)))
@@ -165,7 +171,9 @@ class Study(Plan):
             balance=balance,
             effects=headline,
             effects_known=known_effects,
-            sensitivity=sensitivity_of(self, headline, spreads, _ratios(self, inference)),
+            sensitivity=sensitivity_of(
+                self, headline, np.sqrt(outcomes.variance.mean(axis=0)), _ratios(self, inference)
+            ),
             warnings=told,
             record=_record(self, prepared, watch.seconds, told),
             weights=partial(weight_batches, prepared.extract, self.design.weight, rows, made),
@@ -240,11 +248,10 @@ def _ratios(plan: Plan, inference: Inference) -> dict[int, tuple[float, float]]:
     return ratios
 
 
-def _outcome_spreads(rows: Rows, engine: Engine) -> Any:
-    """Return the standard deviation of each outcome within the groups, under the sampling weights; (m,)."""
+def _outcome_moments(rows: Rows, engine: Engine) -> Moments:
+    """Return the moments of the outcomes by group, under the sampling weights."""
     kernel = MomentsKernel(OutcomeColumns(rows.outcomes), FullSample(SamplingWeights()))
-    moments = engine.run("outcomes: moments", rows.blocks, kernel, merge_moments)
-    return np.sqrt(moments.variance.mean(axis=0))
+    return engine.run("outcomes: moments", rows.blocks, kernel, merge_moments)
 
 
 def _fit_warnings(fit: Fit) -> list[str]:

@@ -65,7 +65,7 @@ def build_rows(extract: Extract, plan: Plan, engine: Engine, block_rows: int = 8
         units=coder.units,
         total=tally.rows,
         exclusions={plan_reader.reasons[k]: n for k, n in sorted(tally.reasons.items())},
-        warnings=(*coder.notes, *_constant_warnings(plan_reader, tally)),
+        warnings=tuple(_constant_warnings(plan_reader, tally)),
     )
     return rows, conclude(plan_reader, tally, rows, coder.notes, extract.digests(), engine)
 

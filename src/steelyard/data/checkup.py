@@ -45,7 +45,7 @@ class Checkup:
         ``file`` (name relative to the plan, or "in memory"), ``rows``, ``bytes``, ``sha256``.
     facts : frame
         ``fact``, ``value`` (numbers): rows, rows in the domain, strata, PSUs, units of later stages,
-        rows with weight zero, exposed rows, reference rows, degrees of freedom of the domain.
+        rows with weight zero, exposed rows, reference rows, PSUs minus strata.
     weights : frame
         ``statistic``, ``all_rows``, ``domain_rows``: sum, mean, min, max, cv, design effect of
         weighting 1 + cv^2 (Kish 1965), effective size (sum w)^2 / sum w^2.
@@ -181,7 +181,7 @@ def _facts(
         (f"units of stage {number} ({stage.columns[0]})", len(stage))
         for number, stage in enumerate(units.stages[2:], start=2)
     ]
-    facts.append(("degrees of freedom in the domain", degrees_of_freedom(units)))
+    facts.append(("PSUs minus strata in the domain", degrees_of_freedom(units)))
     return pd.DataFrame(facts, columns=["fact", "value"])
 
 

@@ -48,10 +48,12 @@ class Overlap:
 class BalanceResults:
     """The groups compared, before and after.
 
-    ``table`` has the columns of balance.csv (design.md section 5), and ``se_before``, ``se_after``,
-    ``mean_difference_before``, ``mean_difference_after`` beside them. ``joint_before`` and ``joint_after``
-    are the Wald F tests of all differences; ``over_identification`` is the chi-square test of the
-    propensity's moment conditions (None where the estimand leaves none to test, as for the ATO with a logit).
+    ``table`` has the columns of balance.csv, and beside them ``kind`` ("number" or "level"), ``se_before``,
+    ``se_after``, ``mean_difference_before``, ``mean_difference_after``, and the rows of each group where the
+    term is not zero, ``rows_exposed`` and ``rows_reference``, which disclosure control needs.
+    ``joint_before`` and ``joint_after`` are the Wald F tests of all differences; ``over_identification`` is the
+    chi-square test of the propensity's moment conditions (None where the estimand leaves none to test, as
+    for the ATO with a logit).
     """
 
     table: pd.DataFrame

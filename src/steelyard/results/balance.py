@@ -35,7 +35,13 @@ def balance_of(
     where the propensity leaves moment conditions to test.
     """
     spread = moments.spread(estimand)
-    table = pd.DataFrame({"term": [t.term for t in columns.terms], "level": [t.level for t in columns.terms]})
+    table = pd.DataFrame(
+        {
+            "term": [t.term for t in columns.terms],
+            "level": [t.level for t in columns.terms],
+            "kind": [t.kind for t in columns.terms],
+        }
+    )
     number = np.array([t.kind == "number" for t in columns.terms], dtype=bool)
     tests = {}
     for when, of_group, distance in (

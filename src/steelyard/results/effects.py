@@ -7,6 +7,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from steelyard.design.survey import SurveyDesign
+from steelyard.estimate.moments import EXPOSED, REFERENCE, Moments
 from steelyard.outcome.effects import Effects
 from steelyard.outcome.measures import SCALES
 from steelyard.plan import Plan
@@ -29,6 +30,7 @@ def effect_results(
     covariance: Floats,
     design: SurveyDesign,
     rows: int,
+    outcomes: Moments,
     title: str,
 ) -> EstimateResults:
     """Return the effects with their covariance; ``.table`` has the columns of effects.csv.
@@ -36,6 +38,7 @@ def effect_results(
     ``params`` and the covariance are on the scale of each measure's link (logarithms of ratios). In the
     table, a ratio's standard error is that of the ratio itself (delta method), its interval the
     exponential of the interval of the logarithm, its test that of the logarithm against zero.
+    ``outcomes`` are the outcomes' moments; the table ends with the counts that disclosure control needs.
     """
     names = tuple(estimates.names[0] for estimates in effects.estimates)
     results = EstimateResults(values, covariance, names, design.df, title=title)
@@ -61,6 +64,10 @@ def effect_results(
             "rows": rows,
             "psus": design.psus,
             "strata": design.strata,
+            "rows_exposed": int(outcomes.rows[EXPOSED]),
+            "rows_reference": int(outcomes.rows[REFERENCE]),
+            "nonzero_exposed": outcomes.present[EXPOSED].astype(int),
+            "nonzero_reference": outcomes.present[REFERENCE].astype(int),
         }
     )
     return results
