@@ -228,7 +228,7 @@ def _display(path: Path, folder: Path) -> str:
 
 def _file_part(name: str, path: Path) -> Part:
     try:
-        with pq.ParquetFile(path, pre_buffer=False) as file:
+        with _opened(path) as file:
             schema, rows = file.schema_arrow, file.metadata.num_rows
     except FileNotFoundError:
         raise ExtractError(
@@ -238,7 +238,7 @@ def _file_part(name: str, path: Path) -> Part:
         raise _damaged(name, error) from None
 
     def batches(columns: list[str], size: int) -> Iterator[pa.RecordBatch]:
-        with pq.ParquetFile(path, pre_buffer=False) as file:
+        with _opened(path) as file:
             if file.metadata.num_rows != rows or not file.schema_arrow.equals(schema):
                 raise ExtractError(
                     f"{name} has changed since it was opened.", mend="Run again when nobody writes to it."
@@ -246,6 +246,11 @@ def _file_part(name: str, path: Path) -> Part:
             yield from file.iter_batches(batch_size=size, columns=columns)
 
     return Part(name, path, schema, rows, batches)
+
+
+def _opened(path: Path) -> pq.ParquetFile:
+    """Open a file to be read one row group at a time, whose pages are checked where they carry checksums."""
+    return pq.ParquetFile(path, pre_buffer=False, page_checksum_verification=True)
 
 
 def _table_part(table: pa.Table) -> Part:
