@@ -75,7 +75,7 @@ def test_outline_guesses_and_writes_a_plan_to_edit(tmp_path):
     keys = tomllib.loads((tmp_path / "new.toml").read_text())
     assert keys["design"]["weight"] == "person_weight"
     assert keys["design"]["clusters"] == ["area", "household"]
-    assert keys["design"]["population"] == ["areas_in_stratum", "households_in_area"]
+    assert keys["design"]["population"] == ["areas_in_stratum"]
     read_plan(tmp_path / "new.toml")
     again = steelyard("outline", EXAMPLE / "household_survey.parquet", "--plan", tmp_path / "new.toml")
     assert again.returncode == 2

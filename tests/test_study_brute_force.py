@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from concurrent.futures import ProcessPoolExecutor, ThreadPoolExecutor
+
 import numpy as np
 import pandas as pd
 import pytest
@@ -280,3 +282,14 @@ def test_weight_file_holds_every_row_in_order():
     np.testing.assert_allclose(
         table.loc[inside, "combined_weight"], s * oracle.balancing_weight("ATE", e, a), rtol=1e-9
     )
+
+
+def test_any_executor_gives_the_same_bits():
+    frame = extract(13)
+    base = study().run(frame, block_rows=50, workers=1)
+    for pool in (ProcessPoolExecutor(2), ThreadPoolExecutor(3)):
+        with pool:
+            other = study().run(frame, block_rows=50, executor=pool)
+        assert np.array_equal(other.effects.params, base.effects.params)
+        assert np.array_equal(other.effects.cov_params(), base.effects.cov_params())
+        assert other.balance.table.equals(base.balance.table)

@@ -11,12 +11,13 @@ from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
-from steelyard.errors import MissingExtraError, SteelyardError
+from steelyard.errors import MissingExtraError, OutputError, SteelyardError
 
 if TYPE_CHECKING:
     import pandas as pd
 
     from steelyard.data.checkup import Checkup
+    from steelyard.data.outline import Outline
     from steelyard.data.passes import Progress
     from steelyard.results.answer import Answer
 
@@ -162,22 +163,15 @@ def _commands() -> Any:
             from steelyard.data.outline import outline
             from steelyard.data.source import open_extract
 
-            found = outline(open_extract(extract), tuple(extract))
+            # File names in the plan to edit start at its folder.
+            folder = plan.parent if plan is not None else Path()
+            found = outline(open_extract([str(Path(name).absolute()) for name in extract], folder))
             _outline(found)
-            if plan is not None:
-                try:
-                    with plan.open("x", encoding="utf-8") as file:
-                        file.write(found.plan_text)
-                except OSError as error:
-                    from steelyard.errors import OutputError
-
-                    raise OutputError(
-                        f"The plan cannot be written to {plan}: {error.strerror}.",
-                        mend="Name a file that does not exist.",
-                    ) from None
-                print(f"Wrote {plan}: edit it, then run: steelyard check {plan}")
-            else:
+            if plan is None:
                 print(found.plan_text)
+            else:
+                _write_new(plan, found.plan_text)
+                print(f"Wrote {plan}: edit it, then run: steelyard check {plan}")
 
     return app
 
@@ -302,20 +296,36 @@ def _checkup(checkup: "Checkup", minimum: int) -> None:
     print(f"Counts here are for the analyst's eyes; results hide those under {minimum}.")
 
 
-def _outline(found: Any) -> None:
+def _write_new(path: Path, text: str) -> None:
+    try:
+        with path.open("x", encoding="utf-8") as file:
+            file.write(text)
+    except OSError as error:
+        raise OutputError(
+            f"The plan cannot be written to {path}: {error.strerror}.",
+            mend="Name a file that does not exist.",
+        ) from None
+
+
+def _outline(found: "Outline") -> None:
     import pandas as pd
 
     from steelyard.report.numbers import percent
 
-    columns = found.columns.assign(missing=found.columns["missing"].map(percent))
+    columns = found.columns.drop(columns=["low", "high"])
+    columns["missing"] = columns["missing"].map(percent)
+    columns["distinct"] = [
+        "over 1,000" if pd.isna(count) else f"{int(count):,}" for count in columns["distinct"]
+    ]
     _table(columns, f"{found.rows:,} rows, the first {found.looked_at:,} looked at", ("missing", "distinct"))
-    if found.guesses:
-        rows = [(g.part, g.column, g.reason) for g in found.guesses]
-        _table(
-            pd.DataFrame(rows, columns=["may be", "column", "because"]), "Likely design columns: check each"
-        )
-    else:
-        print("No column looks like part of the design by its name.")
+    if not found.guesses:
+        print("No column looks like part of the design.")
+        return
+    rows = [
+        (g.part, ", ".join(g.columns), g.reason + (f"; or {', '.join(g.others)}" if g.others else ""))
+        for g in found.guesses
+    ]
+    _table(pd.DataFrame(rows, columns=["may be", "columns", "because"]), "Likely design columns: check each")
 
 
 if __name__ == "__main__":

@@ -51,7 +51,7 @@ def build_rows(extract: Extract, plan: Plan, engine: Engine, block_rows: int = 8
     size = block_rows * max(1, READ_ROWS // block_rows)
     tally, coder, levels = _look(plan_reader, size, engine)
     _refuse_unusable(plan_reader, tally)
-    assembly = _assembly(plan_reader, levels, coder, size)
+    assembly = _assembly(plan_reader, levels, coder, size, tally.indicators)
     blocks = _blocks(plan_reader, assembly, block_rows, size, engine)
     names, exposure_model, outcome_models = assembly.columns()
     rows = Rows(
@@ -190,7 +190,9 @@ def _model(builder: DesignBuilder, index: tuple[int, ...]) -> Model:
     return Model(builder.formula.text, builder.names, index, builder.intercept)
 
 
-def _assembly(plan_reader: Reader, levels: Levels, coder: UnitCoder, size: int) -> _Assembly:
+def _assembly(
+    plan_reader: Reader, levels: Levels, coder: UnitCoder, size: int, indicators: frozenset[str]
+) -> _Assembly:
     """Let the formulas learn from the complete rows of the domain, and plan the columns."""
 
     def chunks() -> Iterator[Mapping[str, Values]]:
@@ -201,7 +203,8 @@ def _assembly(plan_reader: Reader, levels: Levels, coder: UnitCoder, size: int) 
 
     exposure = learn(plan_reader.formula, chunks)
     covariates = tuple(None if f is None else learn(f, chunks) for f in plan_reader.covariates)
-    terms = plan_terms(exposure, plan_reader.extract.columns, levels, plan_reader.plan.balance)
+    kinds = plan_reader.extract.columns
+    terms = plan_terms(exposure, kinds, levels, plan_reader.plan.balance, indicators)
     if not terms.terms:
         raise FormulaError(
             f'The exposure formula "{plan_reader.formula.text}" has no covariate.',
@@ -244,7 +247,8 @@ def _blocks(
 
     runs = plan_reader.extract.read(plan_reader.columns, size)
     count = -(-plan_reader.extract.rows // size)
-    return engine.run("reading: build", runs, build, total=count)
+    # Formulas that have learnt something cannot travel to another process.
+    return engine.local().run("reading: build", runs, build, total=count)
 
 
 def _refuse_unfinished(columns: Floats, names: tuple[str, ...], position: NDArray[np.int64]) -> None:

@@ -312,7 +312,7 @@ def _missing_findings(missing: pd.DataFrame) -> list[Finding]:
                 Finding(
                     "warning",
                     f"{row.column} is missing in {row.share_exposed:.1%} of the exposed but "
-                    f"{row.share_reference:.1%} of the reference rows.",
+                    f"{row.share_reference:.1%} of the reference rows (common practice: a word above 5 points).",
                     "Leaving them out may bias the comparison: find out why it is missing.",
                 )
             )
@@ -328,7 +328,8 @@ def _size_findings(
             found.append(
                 Finding(
                     "warning",
-                    f"There are only {int(counts.sum())} {name} rows in the domain.",
+                    f"There are only {int(counts.sum())} {name} rows in the domain (common practice: a word "
+                    f"below {SMALL_GROUP}).",
                     "Widen the domain; estimates on so few rows are unstable and may disclose persons.",
                 )
             )
@@ -348,7 +349,7 @@ def _size_findings(
             Finding(
                 "warning",
                 f"{left_out:,} of the {in_expression:,} rows of the domain ({left_out / in_expression:.1%}) are "
-                "left out because something is missing.",
+                "left out because something is missing (common practice: a word above 20%).",
                 "See which columns cost most below, and whether the plan needs them.",
             )
         )

@@ -17,17 +17,22 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from steelyard.data.guard import QUOTED, without_quotes
 from steelyard.errors import FormulaError
 
 Bools = NDArray[np.bool_]
 Truth = tuple[Bools, Bools]
 
 LONGEST = 10_000
+DEEPEST = 200
+LARGEST = 1e300
 ALLOWED = (
-    "A domain may use column names, numbers, quoted text, ==, !=, <, <=, >, >=, in, not in, and, or, not, "
-    "+ - * / and parentheses."
+    "A domain may use column names, numbers, quoted text, true, false, ==, !=, <, <=, >, >=, in, not in, and, or, "
+    'not, + - * / and parentheses; a column whose name is not a plain word is written Q("odd name").'
 )
 
+_TRUE_OR_FALSE = frozenset({"truth", "boolean"})
+_NUMERIC = frozenset({"number", "boolean"})
 _COMPARE: dict[type[ast.cmpop], Callable[[Any, Any], Any]] = {
     ast.Eq: lambda a, b: a == b,
     ast.NotEq: lambda a, b: a != b,
@@ -72,27 +77,53 @@ def parse_expression(text: str, columns: Mapping[str, str]) -> Expression:
     FormulaError
         It does not parse, or uses anything outside the allowed parts; the message names it.
     """
-    if not text.strip():
+    plain = " ".join(text.split("\n")).strip()
+    if not plain:
         return Expression(text, (), None)
-    if len(text) > LONGEST:
+    if len(plain) > LONGEST:
         raise FormulaError(
-            f"The domain has {len(text):,} characters.", mend="Derive a column from it instead."
+            f"The domain has {len(plain):,} characters; at most {LONGEST:,} are read.",
+            mend="Derive a column from it instead.",
         )
+    _refuse_comment(plain)
+    check = _Check(plain, columns)
     try:
-        tree = ast.parse(text.strip(), mode="eval").body
-        checked = _Check(text.strip(), columns)
-        if checked.visit(tree) != "truth":
-            raise FormulaError(
-                f'The domain "{text}" is not true or false.',
-                mend="Compare it with something, as in age >= 6.",
-            )
+        tree = ast.parse(plain, mode="eval").body
+        kind = check.visit(tree)
     except SyntaxError as error:
+        place = f" at character {error.offset}" if error.offset else ""
         raise FormulaError(
-            f'The domain "{text}" does not parse at character {error.offset}: {error.msg}.', mend=ALLOWED
+            f'The domain "{_short(plain)}" does not parse{place}: {error.msg}.', mend=ALLOWED
         ) from None
-    except (RecursionError, MemoryError, ValueError):
-        raise FormulaError("The domain is nested too deeply or not text.", mend="Simplify it.") from None
-    return Expression(text, tuple(dict.fromkeys(checked.names)), tree)
+    except (RecursionError, MemoryError):
+        raise _too_deep() from None
+    except ValueError as error:
+        raise FormulaError(f"The domain does not parse: {error}.", mend=ALLOWED) from None
+    if kind not in _TRUE_OR_FALSE:
+        raise FormulaError(
+            f'The domain "{_short(plain)}" is not true or false.',
+            mend="Compare it with something, as in age >= 6.",
+        )
+    return Expression(text, tuple(dict.fromkeys(check.names)), tree)
+
+
+def _refuse_comment(text: str) -> None:
+    """Refuse a #, behind which Python would read nothing, so that conditions there were lost in silence."""
+    masked = without_quotes(text)
+    if "#" in masked:
+        raise FormulaError(
+            f'The domain has a "#" at character {masked.index("#") + 1}.', mend="Write comments outside it."
+        )
+
+
+def _too_deep() -> FormulaError:
+    return FormulaError(
+        f"The domain is nested more than {DEEPEST} deep.", mend="Derive a column from it instead."
+    )
+
+
+def _short(text: str) -> str:
+    return text if len(text) <= 200 else text[:197] + "..."
 
 
 class _Check:
@@ -102,9 +133,18 @@ class _Check:
         self.text = text
         self.columns = columns
         self.names: list[str] = []
+        self.depth = 0
 
     def visit(self, node: ast.expr) -> str:
-        """Return what the node is: "number", "text", "boolean" column, or "truth"."""
+        """Return what the node is: "number", "text", "boolean" (true, false or such a column), or "truth"."""
+        self.depth += 1
+        if self.depth > DEEPEST:
+            raise _too_deep()
+        kind = self._visit(node)
+        self.depth -= 1
+        return kind
+
+    def _visit(self, node: ast.expr) -> str:
         if isinstance(node, ast.BoolOp):
             for value in node.values:
                 self._truth(value)
@@ -120,16 +160,33 @@ class _Check:
             self._number(node.left)
             return self._number(node.right)
         if isinstance(node, ast.Constant) and isinstance(node.value, str | int | float):
-            return "text" if isinstance(node.value, str) else "number"
+            return self._constant(node)
         name = _column(node)
         if name is not None:
             return self._named(name)
         raise self._refusal(node)
 
+    def _constant(self, node: ast.Constant) -> str:
+        if isinstance(node.value, str):
+            if len(QUOTED.findall(self._snippet(node))) > 1:
+                raise FormulaError(
+                    f"In the domain, two texts stand side by side in {self._snippet(node)}.",
+                    mend="Put a comma between them.",
+                )
+            return "text"
+        if isinstance(node.value, bool):
+            return "boolean"
+        if not abs(node.value) <= LARGEST:  # type: ignore[arg-type]
+            raise FormulaError(
+                f'The domain uses the number "{self._snippet(node)}", beyond {LARGEST:g}.',
+                mend="Rescale the column.",
+            )
+        return "number"
+
     def _named(self, name: str) -> str:
         if name not in self.columns:
             if name in {"true", "false"}:
-                return "number"
+                return "boolean"
             near = get_close_matches(name, self.columns, n=1, cutoff=0.6)
             hint = f'Did you mean "{near[0]}"?' if near else "Check the extract's columns."
             raise FormulaError(
@@ -145,54 +202,91 @@ class _Check:
         return {"category": "text", "boolean": "boolean"}.get(kind, "number")
 
     def _truth(self, node: ast.expr) -> None:
-        if self.visit(node) not in {"truth", "boolean"}:
+        if self.visit(node) not in _TRUE_OR_FALSE:
             raise FormulaError(
-                f'In the domain, "{ast.unparse(node)}" is not true or false.',
+                f'In the domain, "{self._snippet(node)}" is not true or false.',
                 mend="Compare it with something.",
             )
 
     def _number(self, node: ast.expr) -> str:
-        if self.visit(node) not in {"number", "boolean"}:
-            raise FormulaError(f'In the domain, "{ast.unparse(node)}" is not a number.', mend=ALLOWED)
+        if self.visit(node) not in _NUMERIC:
+            raise FormulaError(f'In the domain, "{self._snippet(node)}" is not a number.', mend=ALLOWED)
         return "number"
 
     def _comparison(self, node: ast.Compare) -> str:
         left = self.visit(node.left)
         for operator, right in zip(node.ops, node.comparators, strict=True):
             if isinstance(operator, ast.In | ast.NotIn):
+                if right is not node.comparators[-1]:
+                    raise FormulaError(
+                        f'The domain compares a list in "{self._snippet(node)}".',
+                        mend='Join the conditions by "and".',
+                    )
                 kinds = self._members(right)
             elif type(operator) in _COMPARE:
                 kinds = {self.visit(right)}
             else:
                 raise self._refusal(node)
-            numeric = {"number", "boolean"}
-            if any((left in numeric) != (kind in numeric) or "truth" in (left, kind) for kind in kinds):
+            if "truth" in {left, *kinds}:
                 raise FormulaError(
-                    f'The domain compares text with numbers in "{ast.unparse(node)}".',
+                    f'The domain compares a comparison in "{self._snippet(node)}".',
+                    mend="Join conditions by and, or, not.",
+                )
+            if any((left in _NUMERIC) != (kind in _NUMERIC) for kind in kinds):
+                raise FormulaError(
+                    f'The domain compares text with numbers in "{self._snippet(node)}".',
                     mend="Write text in quotes and numbers without.",
                 )
-            if not isinstance(operator, ast.In | ast.NotIn):
-                left = next(iter(kinds))
+            left = next(iter(kinds))
         return "truth"
 
     def _members(self, node: ast.expr) -> set[str]:
         if not isinstance(node, ast.List | ast.Tuple | ast.Set) or not node.elts:
             raise FormulaError(
-                f'In the domain, "in" needs a list, not "{ast.unparse(node)}".',
+                f'In the domain, "in" needs a list, not "{self._snippet(node)}".',
                 mend='Write it as in region in ["north", "south"].',
             )
         for member in node.elts:
-            sign = isinstance(member, ast.UnaryOp) and isinstance(member.op, ast.USub)
-            if not isinstance(member.operand if sign else member, ast.Constant):  # type: ignore[attr-defined]
+            signed = isinstance(member, ast.UnaryOp) and isinstance(member.op, ast.USub | ast.UAdd)
+            value = member.operand if signed else member  # type: ignore[attr-defined]
+            if not isinstance(value, ast.Constant):
                 raise self._refusal(member)
         return {self.visit(member) for member in node.elts}
 
     def _refusal(self, node: ast.AST) -> FormulaError:
-        place = getattr(node, "col_offset", 0) + 1
-        snippet = (ast.get_source_segment(self.text, node) or type(node).__name__)[:60]
+        line = self.text.encode()[: getattr(node, "col_offset", 0)]
         return FormulaError(
-            f'The domain uses "{snippet}" at character {place}, which it may not.', mend=ALLOWED
+            f'The domain uses "{self._snippet(node)}" ({_construct(node)}) at character '
+            f"{len(line.decode()) + 1}, which it may not.",
+            mend=ALLOWED,
         )
+
+    def _snippet(self, node: ast.AST) -> str:
+        text = ast.get_source_segment(self.text, node) or type(node).__name__
+        return text if len(text) <= 60 else text[:57] + "..."
+
+
+_CONSTRUCTS = {
+    ast.Call: "a function call",
+    ast.Attribute: "an attribute",
+    ast.Subscript: "an index",
+    ast.Lambda: "a function",
+    ast.JoinedStr: "a formatted text",
+    ast.NamedExpr: "an assignment",
+    ast.IfExp: "a conditional",
+    ast.ListComp: "a loop",
+    ast.SetComp: "a loop",
+    ast.DictComp: "a loop",
+    ast.GeneratorExp: "a loop",
+    ast.Compare: 'the comparison "is"',
+    ast.BinOp: "an operator",
+    ast.UnaryOp: "an operator",
+    ast.Name: "a column where a constant belongs",
+}
+
+
+def _construct(node: ast.AST) -> str:
+    return _CONSTRUCTS.get(type(node), "no part of a domain")
 
 
 class _Walk:
@@ -221,7 +315,7 @@ class _Walk:
     def operand(self, node: ast.expr) -> tuple[Any, Any]:
         """Return values and where they are known."""
         if isinstance(node, ast.Constant):
-            return node.value, np.bool_(True)
+            return (node.value if isinstance(node.value, str) else float(node.value)), np.bool_(True)  # type: ignore[arg-type]
         if isinstance(node, ast.UnaryOp):
             value, known = self.operand(node.operand)
             return (-value if isinstance(node.op, ast.USub) else value), known

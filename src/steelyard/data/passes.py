@@ -69,6 +69,12 @@ class Engine:
             self.progress(what, done, total)
         return merged.result()
 
+    def local(self) -> Engine:
+        """Return an engine for work that cannot leave this process: this one's threads, or none."""
+        if self.executor is None or isinstance(self.executor, ThreadPoolExecutor):
+            return self
+        return Engine(progress=self.progress)
+
     def map(self, function: Callable[[Item], Part], items: Iterable[Item]) -> list[Part]:
         """Return ``function`` of each item, in order: for what is left to do when a pass is merged."""
         if self.executor is None:

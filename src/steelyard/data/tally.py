@@ -55,6 +55,7 @@ class Tally:
         Outcome and family -> rows of the domain with a value that the family does not have.
     low, high : mapping
         Column -> smallest and largest number in the domain.
+    beyond : columns with a number other than 0 and 1 in the domain
     """
 
     reader: Reader
@@ -69,6 +70,7 @@ class Tally:
     bad_values: Counter[tuple[str, str]] = field(default_factory=Counter)
     low: dict[str, float] = field(default_factory=dict)
     high: dict[str, float] = field(default_factory=dict)
+    beyond: set[str] = field(default_factory=set)
     bad_weights: int = 0
     bad_positions: list[int] = field(default_factory=list)
 
@@ -90,6 +92,11 @@ class Tally:
         if len(self.levels) <= LEVELS_COUNTED:
             self.levels.update(exposure_counts(chunk))
         self._values(chunk)
+
+    @property
+    def indicators(self) -> frozenset[str]:
+        """Columns that are 0 or 1 wherever they are known."""
+        return frozenset(self.low) - self.beyond
 
     def refuse_bad_weights(self) -> None:
         """Refuse weights that are missing, negative or infinite.
@@ -128,3 +135,5 @@ class Tally:
                 values = column[chunk.kept]
                 self.low[name] = min(self.low.get(name, np.inf), float(values.min()))
                 self.high[name] = max(self.high.get(name, -np.inf), float(values.max()))
+                if name not in self.beyond and not np.all((values == 0) | (values == 1)):
+                    self.beyond.add(name)

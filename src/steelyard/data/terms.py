@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
-import re
-from collections.abc import Callable, Mapping
+import ast
+from collections.abc import Callable, Collection, Mapping
 from dataclasses import dataclass, field
-from itertools import combinations
+from itertools import combinations, product
+from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -46,6 +47,7 @@ def plan_terms(
     kinds: Mapping[str, str],
     levels: Mapping[str, tuple[str, ...]],
     balance: Balance,
+    indicators: Collection[str] = (),
 ) -> TermPlan:
     """Plan the balance table of an exposure model.
 
@@ -57,6 +59,7 @@ def plan_terms(
     ----------
     kinds : the extract's columns and their kinds
     levels : levels of the categories among the user's columns
+    indicators : numbers known to be 0 or 1, whose squares are themselves
 
     Raises
     ------
@@ -68,112 +71,196 @@ def plan_terms(
         if len(term.factors) == 1:
             maker.factor(term.factors[0].code, where)
         elif term.factors:
-            maker.product_of_model(where)
+            maker.interaction(term, where)
     for name in balance.columns:
         if kinds[name] == "category":
             for level in levels[name]:
-                maker.indicator(name, level, _LevelOf(name, level))
+                maker.level(name, level, _LevelOf(name, level))
         else:
             maker.number(name)
-    numbers, rows = maker.plain_numbers(), list(maker.plan.terms)
+    numbers = [row for row in maker.mains if maker.is_plain(row)]
+    factors = numbers + [row for row in maker.mains if row.kind == "level"]
     if balance.squares:
-        maker.plan.terms += [Term(f"{t.term} squared", "", "number", t.index, t.index) for t in numbers]
+        for row in numbers:
+            if row.term not in indicators and not maker.has(f"I({row.term} ** 2)", ""):
+                maker.add(Term(f"{row.term} squared", "", "number", row.index, row.index))
     if balance.interactions:
-        maker.plan.terms += _products(numbers + [t for t in rows if t.kind == "level" and t.times is None])
+        for row in _products(factors, maker):
+            maker.add(row)
     return maker.plan
 
 
 class _Maker:
+    """Collect rows, each once, and the extra columns they need.
+
+    ``mains`` are the rows that are no interaction.
+    """
+
     def __init__(self, builder: DesignBuilder, kinds: Mapping[str, str]) -> None:
         self.builder = builder
         self.kinds = kinds
         self.plan = TermPlan()
-        self.place = {name: j for j, name in enumerate(builder.names)}
+        self.mains: list[Term] = []
+        self.numbers = {
+            bare_column(term.factors[0].code): where.start
+            for term, where in builder.info.term_slices.items()
+            if len(term.factors) == 1 and not builder.categories(term.factors[0].code)
+        }
+        self.indicators = _indicators(builder)
+        self.seen: set[tuple[str, str]] = set()
 
     def factor(self, code: str, where: slice) -> None:
         """Rows of a term of one factor, whose columns of the model are ``where``."""
-        categories = self.builder.categories(code)
-        columns = range(*where.indices(len(self.builder.names)))
-        if categories:
-            label = self._label(code)
-            for number, category in enumerate(categories):
-                text = level_text(category)
-                own = [self.place.get(f"{code}[T.{text}]"), self.place.get(f"{code}[{text}]")]
-                index = next((j for j in own if j is not None), None)
-                if index is not None:
-                    self._add(Term(label, text, "level", index))
-                else:
-                    self.indicator(label, text, _CategoryOf(self.builder, code, number))
-            return
-        if bare_column(code) is not None:
-            self._add(Term(str(bare_column(code)), "", "number", columns[0]))
-            return
-        for number, j in enumerate(columns, start=1):
-            self._add(Term(code, str(number) if len(columns) > 1 else "", "number", j))
-        for name in self.builder.formula.by_factor[code]:
-            if self.kinds[name] != "category":
-                self.number(name)
+        if not self.builder.categories(code) and bare_column(code) is None:
+            columns = range(where.start, where.stop)
+            for number, j in enumerate(columns, start=1):
+                self.main(Term(code, str(number) if len(columns) > 1 else "", "number", j))
+        self.margin(code)
 
-    def product_of_model(self, where: slice) -> None:
-        """Rows of an interaction: the model's own columns."""
-        for j in range(*where.indices(len(self.builder.names))):
-            name = self.builder.names[j]
-            found = re.findall(r"\[(?:T\.)?([^\]]*)\]", name)
-            plain = re.sub(r"\[[^\]]*\]", "", name)
-            term = ":".join(self._label(part) for part in plain.split(":"))
-            self._add(Term(term, ", ".join(found), "number", j))
+    def margin(self, code: str) -> None:
+        """Rows of a factor by itself: every level of a category, or the columns it is computed from."""
+        categories = self.builder.categories(code)
+        for number, category in enumerate(categories):
+            label, text = self._label(code), level_text(category)
+            index = self.indicators.get((code, number))
+            if index is None:
+                self.level(label, text, _CategoryOf(self.builder, code, number))
+            else:
+                self.main(Term(label, text, "level", index))
+        if not categories:
+            for name in self.builder.formula.by_factor[code]:
+                if self.kinds[name] != "category":
+                    self.number(name)
+
+    def interaction(self, term: Any, where: slice) -> None:
+        """Rows of an interaction: its factors by themselves, and the model's own columns."""
+        for factor in term.factors:
+            self.margin(factor.code)
+        first = where.start
+        for subterm in self.builder.info.term_codings[term]:
+            if len(subterm.factors) > 1:
+                name = ":".join(self._label(factor.code) for factor in subterm.factors)
+                parts = [self._parts(subterm, factor) for factor in subterm.factors]
+                # In patsy's columns the first factor runs fastest.
+                for place, reverse in enumerate(product(*reversed(parts))):
+                    texts = [text for text, _ in reversed(reverse) if text]
+                    is_level = all(indicates for _, indicates in reverse)
+                    self.add(Term(name, ", ".join(texts), "level" if is_level else "number", first + place))
+            first += subterm.num_columns
 
     def number(self, name: str) -> None:
         """A row for a plain number, from the model's column if it has one."""
-        if name in self.place:
-            self._add(Term(name, "", "number", self.place[name]))
-        elif not self._has(name, ""):
-            self._add(Term(name, "", "number", self._extra(name, _NumberOf(name))))
+        if self.has(name, ""):
+            return
+        index = self.numbers.get(name)
+        if index is None:
+            index = self._extra(name, _NumberOf(name))
+        self.main(Term(name, "", "number", index))
 
-    def indicator(self, label: str, level: str, make: Callable[[Values], Floats]) -> None:
+    def level(self, label: str, level: str, make: Callable[[Values], Floats]) -> None:
         """A row for a level that is no column of the model."""
-        if not self._has(label, level):
-            self._add(Term(label, level, "level", self._extra(f"{label}: {level}", make)))
+        if not self.has(label, level):
+            self.main(Term(label, level, "level", self._extra(f"{label}: {level}", make)))
 
-    def plain_numbers(self) -> list[Term]:
-        """Rows of numbers that are columns of the extract themselves and can take two values or more."""
-        return [
-            t
-            for t in self.plan.terms
-            if t.kind == "number" and self.kinds.get(t.term) == "number" and not t.level
-        ]
+    def main(self, term: Term) -> None:
+        """Add a row that is no interaction, unless it is there."""
+        if self.add(term):
+            self.mains.append(term)
+
+    def add(self, term: Term) -> bool:
+        """Add a row and return whether it was new."""
+        if self.has(term.term, term.level):
+            return False
+        self.seen.add((term.term, term.level))
+        self.plan.terms.append(term)
+        return True
+
+    def has(self, term: str, level: str) -> bool:
+        """Whether there is such a row."""
+        return (term, level) in self.seen
+
+    def is_plain(self, row: Term) -> bool:
+        """Whether a row is a number that is a column of the extract itself, and not a yes or no."""
+        return row.kind == "number" and not row.level and self.kinds.get(row.term) == "number"
 
     def _extra(self, name: str, make: Callable[[Values], Floats]) -> int:
         self.plan.extra_names.append(name)
         self.plan.makers.append(make)
         return len(self.builder.names) + len(self.plan.makers) - 1
 
-    def _add(self, term: Term) -> None:
-        if not self._has(term.term, term.level):
-            self.plan.terms.append(term)
-
-    def _has(self, term: str, level: str) -> bool:
-        return any(t.term == term and t.level == level for t in self.plan.terms)
+    def _parts(self, subterm: Any, factor: Any) -> list[tuple[str, bool]]:
+        """Return, for each column of a factor within an interaction, its text and whether it is an indicator."""
+        info = self.builder.info.factor_infos[factor]
+        if info.type == "numerical":
+            count = info.num_columns
+            return [(str(number) if count > 1 else "", False) for number in range(1, count + 1)]
+        contrast = subterm.contrast_matrices[factor]
+        levels = _unit_columns(contrast.matrix)
+        return [
+            (level_text(info.categories[levels[j]]), True) if j in levels else (suffix.strip("[]."), False)
+            for j, suffix in enumerate(contrast.column_suffixes)
+        ]
 
     def _label(self, code: str) -> str:
-        """The plain name of a factor: its one column, where it is C() of it or nothing else."""
-        columns = self.builder.formula.by_factor.get(code, ())
-        if len(columns) == 1 and (code == columns[0] or re.match(r"(C|Q)\(", code)):
-            return columns[0]
-        return code
+        """Return the plain name of a factor: its column, where it is C() of it or nothing else."""
+        node = ast.parse(code, mode="eval").body
+        if isinstance(node, ast.Call) and isinstance(node.func, ast.Name) and node.func.id == "C":
+            return bare_column(ast.unparse(node.args[0])) or code
+        return bare_column(code) or code
 
 
-def _products(terms: list[Term]) -> list[Term]:
-    pairs = [(a, b) for a, b in combinations(terms, 2) if a.term != b.term]
+def _indicators(builder: DesignBuilder) -> dict[tuple[str, int], int]:
+    """Return factor and number of a level -> the model's column that is the indicator of that level."""
+    found = {}
+    for term, subterms in builder.info.term_codings.items():
+        first = builder.info.term_slices[term].start
+        for subterm in subterms:
+            if len(subterm.factors) == 1 and subterm.contrast_matrices:
+                (factor,) = subterm.factors
+                columns = _unit_columns(subterm.contrast_matrices[factor].matrix)
+                found.update({(factor.code, level): first + j for j, level in columns.items()})
+            first += subterm.num_columns
+    return found
+
+
+def _unit_columns(matrix: Floats) -> dict[int, int]:
+    """Return column -> level for those columns of a contrast matrix that indicate one level."""
+    return {
+        j: int(np.argmax(column))
+        for j, column in enumerate(np.asarray(matrix).T)
+        if (column != 0).sum() == 1 and column.max() == 1
+    }
+
+
+def _products(rows: list[Term], maker: _Maker) -> list[Term]:
+    """Return the products of pairs of rows of different terms that have no row yet."""
+    pairs = [
+        (a, b)
+        for a, b in combinations(rows, 2)
+        if a.term != b.term
+        and not maker.has(f"{a.term}:{b.term}", _join(a, b))
+        and not maker.has(f"{b.term}:{a.term}", _join(b, a))
+    ]
     if len(pairs) > MOST_TERMS:
         raise PlanError(
             f"balance.interactions would add {len(pairs):,} rows to the balance table; at most {MOST_TERMS} are made.",
-            mend="Write the products you need into the exposure formula, as a:b, and leave the key out.",
+            mend="Write the products you need into the exposure formula, as a:b, and leave the key out; or "
+            "derive them as columns and name those in balance.columns.",
         )
     return [
-        Term(f"{a.term}:{b.term}", ", ".join(x for x in (a.level, b.level) if x), "number", a.index, b.index)
+        Term(
+            f"{a.term}:{b.term}",
+            _join(a, b),
+            "level" if a.kind == b.kind == "level" else "number",
+            a.index,
+            b.index,
+        )
         for a, b in pairs
     ]
+
+
+def _join(a: Term, b: Term) -> str:
+    return ", ".join(row.level for row in (a, b) if row.level)
 
 
 @dataclass(frozen=True)
