@@ -1,4 +1,8 @@
-"""Newton's method for one column of weights, with step halving, and what to say when it fails."""
+"""Newton's method for one column of weights, and what to say when it fails.
+
+A step after which the next would be shorter is taken as it is; only where steps grow is the deviance
+looked at, and the step halved until it does not rise.
+"""
 
 from __future__ import annotations
 
@@ -27,27 +31,49 @@ SUSPICIOUS_STEPS = 9
 
 @dataclass(frozen=True)
 class _StepKernel:
-    """From a block to its score, expected information, deviance and count of inadmissible rows at ``b``."""
+    """From a block to its score, expected information and count of inadmissible rows at ``b``."""
 
     regression: Regression
     scale: Scale
     b: Floats
     column: int
 
-    def __call__(self, block: Block) -> tuple[Floats, Floats, float, int]:
+    def __call__(self, block: Block) -> tuple[Floats, Floats, int]:
         likelihood = self.regression.likelihood
-        x = self.scale(self.regression.columns(block))
-        y, w = self.regression.response(block), self.regression.weights(block)[:, self.column]
-        eta = x @ self.b
+        x, y, w, eta = _counted_rows(self.regression, self.scale, self.b, self.column, block)
         size = len(self.b)
-        counted = w > 0
-        if not likelihood.admissible(eta[counted]):
-            return np.zeros(size), np.zeros((size, size)), 0.0, 1
-        if not counted.all():
-            x, y, w, eta = x[counted], y[counted], w[counted], eta[counted]
+        if not likelihood.admissible(eta):
+            return np.zeros(size), np.zeros((size, size)), 1
         score = x.T @ (w * likelihood.score(y, eta))
         information = x.T @ (x * (w * likelihood.expected_information(eta))[:, np.newaxis])
-        return score, information, likelihood.deviance(y, eta, w), 0
+        return score, information, 0
+
+
+@dataclass(frozen=True)
+class _DevianceKernel:
+    """From a block to its deviance at ``b``, infinite where a row is inadmissible."""
+
+    regression: Regression
+    scale: Scale
+    b: Floats
+    column: int
+
+    def __call__(self, block: Block) -> float:
+        _, y, w, eta = _counted_rows(self.regression, self.scale, self.b, self.column, block)
+        likelihood = self.regression.likelihood
+        return likelihood.deviance(y, eta, w) if likelihood.admissible(eta) else np.inf
+
+
+def _counted_rows(
+    regression: Regression, scale: Scale, b: Floats, column: int, block: Block
+) -> tuple[Floats, Floats, Floats, Floats]:
+    """Return columns, response, weight and linear predictor of the rows that carry weight."""
+    x, y = scale(regression.columns(block)), regression.response(block)
+    w = regression.weights(block)[:, column]
+    counted = w > 0
+    if not counted.all():
+        x, y, w = x[counted], y[counted], w[counted]
+    return x, y, w, x @ b
 
 
 @dataclass(frozen=True)
@@ -105,24 +131,25 @@ class Newton:
             They do not settle for another reason.
         """
         b = self._start() if start is None else start
-        score, information, deviance, bad = self._at(b)
+        score, information, bad = self._at(b)
         if bad:
             raise self._failure("has no admissible starting point")
         keep = independent_columns(information)
-        previous = np.inf
+        step, size = self._step(information, keep, score, b)
         for taken in range(1, MOST_STEPS + 1):
-            try:
-                step = factored(information, keep).solve(score)
-            except np.linalg.LinAlgError:
-                self._look_for_separation(b)
-                raise self._failure("lost its curvature") from None
-            size = float(np.max(np.abs(step * self.scale.unit), initial=0))
             if size <= STEP_TOLERANCE:
                 return Solution(b + step, information, keep, taken)
-            if taken > SUSPICIOUS_STEPS and size > 0.1 and size > 0.5 * previous:
+            if taken > SUSPICIOUS_STEPS and size > 0.1:
                 self._look_for_separation(step)
-            b, (score, information, deviance, _) = self._halved(b, step, deviance)
-            previous = size
+            score, ahead, bad = self._at(b + step)
+            if not bad:
+                further, next_size = self._step(ahead, keep, score, b + step)
+                if next_size < size:
+                    b, step, size, information = b + step, further, next_size, ahead
+                    continue
+            b = self._shortened(b, step)
+            score, information, _ = self._at(b)
+            step, size = self._step(information, keep, score, b)
         self._look_for_separation(step)
         raise self._failure(f"did not settle in {MOST_STEPS} steps")
 
@@ -163,20 +190,33 @@ class Newton:
         b[self.regression.intercept] = self.regression.likelihood.predictor(np.array([mean]))[0]
         return b
 
-    def _at(self, b: Floats) -> tuple[Floats, Floats, float, int]:
+    def _at(self, b: Floats) -> tuple[Floats, Floats, int]:
         kernel = _StepKernel(self.regression, self.scale, b, self.column)
         return self.engine.run(f"{self.regression.what}: fit", self.blocks, kernel)
 
-    def _halved(
-        self, b: Floats, step: Floats, deviance: float
-    ) -> tuple[Floats, tuple[Floats, Floats, float, int]]:
-        """Take the step, or the longest half, quarter, ... of it that does not raise the deviance."""
+    def _step(
+        self, information: Floats, keep: NDArray[np.bool_], score: Floats, b: Floats
+    ) -> tuple[Floats, float]:
+        """Return the step and its size in coefficients of unit-spread columns."""
+        try:
+            step = factored(information, keep).solve(score)
+        except np.linalg.LinAlgError:
+            self._look_for_separation(b)
+            raise self._failure("lost its curvature") from None
+        return step, float(np.max(np.abs(step * self.scale.unit), initial=0))
+
+    def _shortened(self, b: Floats, step: Floats) -> Floats:
+        """Return where the longest of the step, its half, its quarter, ... leads that does not raise the deviance."""
+        before = self._deviance(b)
         for _ in range(MOST_HALVINGS):
-            parts = self._at(b + step)
-            if not parts[3] and parts[2] <= deviance + 1e-9 * (abs(deviance) + 1):
-                return b + step, parts
+            if self._deviance(b + step) <= before + 1e-9 * (abs(before) + 1):
+                return b + step
             step = step / 2
         raise self._failure("found no step that improves it")
+
+    def _deviance(self, b: Floats) -> float:
+        kernel = _DevianceKernel(self.regression, self.scale, b, self.column)
+        return self.engine.run(f"{self.regression.what}: deviance", self.blocks, kernel)
 
     def _look_for_separation(self, direction: Floats) -> None:
         if self.regression.likelihood.family == "binomial":
