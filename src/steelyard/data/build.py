@@ -248,7 +248,10 @@ def _blocks(
     runs = plan_reader.extract.read(plan_reader.columns, size)
     count = -(-plan_reader.extract.rows // size)
     # Formulas that have learnt something cannot travel to another process.
-    return engine.local().run("reading: build", runs, build, total=count)
+    blocks = engine.local().run("reading: build", runs, build, total=count)
+    # What Arrow keeps for reading more is better used by the estimates.
+    pa.default_memory_pool().release_unused()
+    return blocks
 
 
 def _refuse_unfinished(columns: Floats, names: tuple[str, ...], position: NDArray[np.int64]) -> None:

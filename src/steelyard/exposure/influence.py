@@ -93,10 +93,15 @@ class _DriftKernel:
         in_predictor, in_share = weight_slopes(rows, e.weighing)
         parts = []
         for factors, columns in e.own(rows):
-            for j in range(factors.shape[1]):
-                weight = rows.block.weight * factors[:, j]
-                moved = (columns * (weight * in_predictor)[:, np.newaxis]).T @ rows.columns
-                if self.balancing.share is not None:
-                    moved = np.column_stack([moved, columns.T @ (weight * in_share)])
-                parts.append(moved)
+            weight = rows.block.weight[:, np.newaxis] * factors
+            if columns.shape[1] == 1:
+                moved = (columns * weight * in_predictor[:, np.newaxis]).T @ rows.columns
+            else:
+                moved = np.concatenate(
+                    [(columns * (w * in_predictor)[:, np.newaxis]).T @ rows.columns for w in weight.T]
+                )
+            if self.balancing.share is not None:
+                shares = columns.T @ (weight * in_share[:, np.newaxis])
+                moved = np.column_stack([moved, shares.T.ravel()])
+            parts.append(moved)
         return np.concatenate(parts)
