@@ -1,4 +1,4 @@
-"""The command line as a user meets it: in a process of its own."""
+"""The command line, from a plan on disk to files, messages and exit codes."""
 
 from __future__ import annotations
 
@@ -8,121 +8,278 @@ import signal
 import subprocess
 import sys
 import time
-import tomllib
-from pathlib import Path
 
+import numpy as np
 import pandas as pd
 import pytest
 
-from steelyard.plan import read_plan
+from steelyard import app
+from steelyard.errors import EstimationError
+from steelyard.report import write
+from steelyard.report.write import FILES
 
-EXAMPLE = Path(__file__).parents[1] / "examples" / "piped-water"
-PLAN = str(EXAMPLE / "study.toml")
-
-
-def steelyard(*arguments, **changes):
-    return subprocess.run(
-        [sys.executable, "-m", "steelyard.app", *map(str, arguments)],
-        capture_output=True,
-        text=True,
-        env={**os.environ, "COLUMNS": "120", "TERM": "dumb", **changes},
-        check=False,
-    )
-
-
-def test_run_writes_the_files_and_prints_a_summary(tmp_path):
-    done = steelyard("run", PLAN, "--out", tmp_path / "out", "--workers", "2")
-    assert done.returncode == 0, done.stderr
-    assert sorted(os.listdir(tmp_path / "out")) == [
-        *("balance.csv", "effects.csv", "record.json"),
-        *("report.html", "weights.parquet"),
-    ]
-    effects = pd.read_csv(tmp_path / "out" / "effects.csv")
-    assert f"−{abs(effects['estimate'][0]):.2f}" in done.stdout
-    assert "Largest |SMD|" in done.stdout
-    assert "unmeasured confounding" in done.stdout
-    assert "\x1b[" not in done.stdout + done.stderr
-    assert not done.stderr
+PLAN = """
+title = "A study"
+[data]
+files = "survey.parquet"
+domain = "age >= 6"
+[design]
+weight = "w"
+strata = "h"
+clusters = "psu"
+[exposure]
+formula = "a ~ x + C(region)"
+[[outcome]]
+name = "y"
+[[outcome]]
+name = "b"
+family = "binomial"
+measure = "ratio"
+"""
 
 
-def test_check_audits_and_estimates_nothing(tmp_path):
-    done = steelyard("check", PLAN)
-    assert done.returncode == 0, done.stderr
-    for text in (
+def survey(n=1200):
+    rng = np.random.default_rng(7)
+    frame = pd.DataFrame({"h": np.arange(n) % 6, "psu": (np.arange(n) // 6) % 5, "x": rng.normal(size=n)})
+    frame["region"] = rng.choice(["north", "south", "[bold]east[/bold]"], n)
+    frame["age"] = rng.integers(0, 60, n)
+    frame["w"] = np.exp(0.3 * rng.normal(size=n))
+    frame["a"] = (rng.random(n) < 1 / (1 + np.exp(-0.6 * frame["x"]))).astype(int)
+    frame["y"] = 1 + 0.5 * frame["a"] + frame["x"] + rng.normal(size=n)
+    frame["b"] = (rng.random(n) < 0.3 + 0.2 * frame["a"]).astype(int)
+    return frame
+
+
+@pytest.fixture
+def folder(tmp_path):
+    survey().to_parquet(tmp_path / "survey.parquet")
+    (tmp_path / "study.toml").write_text(PLAN, encoding="utf-8")
+    return tmp_path
+
+
+@pytest.fixture
+def command(monkeypatch, capfd):
+    """Run the command line; return the exit code and what was said."""
+
+    def run(*arguments):
+        monkeypatch.setattr(sys, "argv", ["steelyard", *map(str, arguments)])
+        with pytest.raises(SystemExit) as left:
+            app.main()
+        said = capfd.readouterr()
+        return left.value.code or 0, said.out, said.err
+
+    return run
+
+
+def test_run_writes_the_five_files_and_says_where(folder, command):
+    code, out, err = command("run", folder / "study.toml", "--out", folder / "out", "--workers", 2)
+    assert code == 0, err
+    assert sorted(path.name for path in (folder / "out").iterdir()) == sorted(FILES)
+    for name in FILES:
+        assert str(folder / "out" / name) in out
+    effects = pd.read_csv(folder / "out" / "effects.csv")
+    assert f"{effects['estimate'][0]:.2f}" in out
+    assert "odds" not in out
+    assert "difference" in out
+    assert "95% interval" in out
+    assert "Effective sizes: exposed" in out
+    assert "Traceback" not in err
+
+
+def test_output_that_is_no_terminal_has_no_colours_and_no_bars(folder, command):
+    _, out, err = command("run", folder / "study.toml", "--out", folder / "out")
+    assert "\x1b" not in out + err
+    assert "\r" not in out + err
+    lines = err.splitlines()
+    assert all(line.endswith(": done") for line in lines)
+    assert len(lines) == len(set(lines))
+
+
+def test_the_answer_is_the_same_for_any_number_of_workers(folder, command):
+    for workers in (1, 3):
+        assert (
+            command("run", folder / "study.toml", "--out", folder / f"w{workers}", "--workers", workers)[0]
+            == 0
+        )
+    for name in ("effects.csv", "balance.csv", "weights.parquet"):
+        assert (folder / "w1" / name).read_bytes() == (folder / "w3" / name).read_bytes()
+
+
+def test_the_printed_summary_hides_a_small_group(folder, command):
+    frame = survey()
+    frame.loc[frame.index[8:], "a"] = 0
+    frame.loc[frame.index[:8], "a"] = 1
+    frame.loc[frame.index[:8], "age"] = 10
+    frame.to_parquet(folder / "survey.parquet")
+    (folder / "study.toml").write_text(PLAN.replace("a ~ x + C(region)", "a ~ x"), encoding="utf-8")
+    code, out, err = command("run", folder / "study.toml", "--out", folder / "out")
+    assert code == 0, err
+    assert "under 10" in out
+    assert not re.search(r"Effective sizes:.*\d", out)
+    assert "under 10" in (folder / "out" / "effects.csv").read_text()
+
+
+def test_check_prints_the_check_up_and_estimates_nothing(folder, command, monkeypatch):
+    code, out, _ = command("check", folder / "study.toml")
+    assert code == 0
+    for words in (
         "rows in the extract",
-        "design effect of weighting",
+        "1,200",
         "outside the domain",
-        "Ziskel Steppe",
-        "note",
+        "effective size",
+        "Strata",
+        "Missing",
     ):
-        assert text in done.stdout
-    refused = Path(PLAN).read_text().replace('"collapse"', '"refuse"')
-    refused = refused.replace("household_survey.parquet", str(EXAMPLE / "household_survey.parquet"))
-    (tmp_path / "study.toml").write_text(refused)
-    done = steelyard("check", tmp_path / "study.toml")
-    assert done.returncode == 1
-    assert re.search(r"error\s+1 stratum\(s\) have one PSU", done.stdout)
-    done = steelyard("run", tmp_path / "study.toml", "--out", tmp_path / "out")
-    assert done.returncode == 2
-    assert "single_psu" in done.stderr
-    assert not (tmp_path / "out").exists()
+        assert words in out
+    assert not (folder / "out").exists()
 
 
-def test_outline_guesses_and_writes_a_plan_to_edit(tmp_path):
-    done = steelyard("outline", EXAMPLE / "household_survey.parquet", "--plan", tmp_path / "new.toml")
-    assert done.returncode == 0, done.stderr
-    assert re.search(r"weight\s+person_weight", done.stdout)
-    keys = tomllib.loads((tmp_path / "new.toml").read_text())
-    assert keys["design"]["weight"] == "person_weight"
-    assert keys["design"]["clusters"] == ["area", "household"]
-    assert keys["design"]["population"] == ["areas_in_stratum"]
-    read_plan(tmp_path / "new.toml")
-    again = steelyard("outline", EXAMPLE / "household_survey.parquet", "--plan", tmp_path / "new.toml")
-    assert again.returncode == 2
-    assert "does not exist" in again.stderr
+def test_check_leaves_with_1_where_a_run_would_refuse(folder, command):
+    frame = survey()
+    frame.loc[frame["h"] == 0, "psu"] = 0
+    frame.to_parquet(folder / "survey.parquet")
+    code, out, _ = command("check", folder / "study.toml")
+    assert code == 1
+    assert "error: 1 stratum(s) have one PSU: 0." in out
+    assert 'Set design.single_psu to "recentre"' in out
 
 
-def test_errors_are_a_message_and_a_mend_without_a_traceback(tmp_path):
-    for arguments, words in (
-        (("run", tmp_path / "none.toml", "--out", tmp_path), "no plan file"),
-        (("outline", tmp_path / "none.parquet"), "no file"),
-    ):
-        done = steelyard(*arguments)
-        assert done.returncode == 2
-        assert words in done.stderr
-        assert "Traceback" not in done.stderr
-    done = steelyard("check", tmp_path / "none.toml", "--trace")
-    assert "Traceback" in done.stderr
-    assert steelyard("run", PLAN).returncode == 2
-    assert steelyard("rum").returncode == 2
+def test_a_refusal_is_a_message_and_its_mend_without_a_traceback(folder, command):
+    (folder / "study.toml").write_text(PLAN.replace('weight = "w"', 'weight = "ww"'), encoding="utf-8")
+    code, out, err = command("run", folder / "study.toml", "--out", folder / "out")
+    assert code == 2
+    assert 'Error: The plan names column "ww"' in err
+    assert 'Did you mean "w"?' in err
+    assert "Traceback" not in err
+    assert out == ""
+    assert not (folder / "out").exists()
 
 
-def test_help_and_version():
-    for arguments in ((), ("--help",), ("run", "--help"), ("check", "--help"), ("outline", "--help")):
-        done = steelyard(*arguments)
-        assert "Usage" in done.stdout + done.stderr, arguments
-    assert re.fullmatch(r"steelyard \d+\.\d+\.\d+\n", steelyard("--version").stdout)
+def test_a_place_that_cannot_hold_results_is_refused_before_the_work(folder, command, monkeypatch):
+    (folder / "out").write_text("a file")
+
+    def fail(*arguments, **named):
+        raise AssertionError("the work was begun")
+
+    monkeypatch.setattr("steelyard.study.Study.run", fail)
+    code, _, err = command("run", folder / "study.toml", "--out", folder / "out")
+    assert code == 2
+    assert "it is a file" in err
+    assert "Choose a folder" in err
 
 
-@pytest.mark.parametrize("delay", [0.6, 1.5, 2.5])
-def test_an_interrupt_leaves_nothing_behind(tmp_path, delay):
-    process = subprocess.Popen(
-        [sys.executable, "-m", "steelyard.app", "run", PLAN, "--out", str(tmp_path / "out")],
-        stdout=subprocess.PIPE,
-        stderr=subprocess.PIPE,
+def test_an_interrupt_leaves_with_130_and_no_files(folder, command, monkeypatch):
+    def interrupt(*arguments):
+        raise KeyboardInterrupt
+
+    monkeypatch.setattr(write, "_write_weights", interrupt)
+    code, _, err = command("run", folder / "study.toml", "--out", folder / "out")
+    assert code == 130
+    assert "Interrupted" in err
+    assert not (folder / "out").exists()
+
+
+def test_a_defect_is_short_and_shows_its_place_on_request(folder, command, monkeypatch):
+    def fail(*arguments, **named):
+        raise ZeroDivisionError("by zero")
+
+    monkeypatch.setattr("steelyard.study.Study.run", fail)
+    arguments = ("run", folder / "study.toml", "--out", folder / "out")
+    code, _, err = command(*arguments)
+    assert code == 2
+    assert "Unexpected ZeroDivisionError: by zero" in err
+    assert "--trace" in err
+    assert "Traceback" not in err
+    code, _, err = command(*arguments, "--trace")
+    assert code == 2
+    assert "Traceback" in err
+
+
+def test_a_refusal_can_show_its_place_too(folder, command, monkeypatch):
+    def fail(*arguments, **named):
+        raise EstimationError("no", mend="yes")
+
+    monkeypatch.setattr("steelyard.study.Study.check", fail)
+    assert "Traceback" in command("check", folder / "study.toml", "--trace")[2]
+
+
+def test_outline_prints_columns_guesses_and_writes_a_plan_once(folder, command):
+    code, out, _ = command("outline", folder / "survey.parquet")
+    assert code == 0
+    assert "1,200 rows, 9 columns" in out
+    assert "[bold]east[/bold]" in out
+    assert "clusters: psu" in out
+    code, out, _ = command("outline", folder / "survey.parquet", "--plan", folder / "new.toml")
+    assert code == 0
+    assert 'files = ["survey.parquet"]' in (folder / "new.toml").read_text(encoding="utf-8")
+    (folder / "new.toml").write_text("mine")
+    code, _, err = command("outline", folder / "survey.parquet", "--plan", folder / "new.toml")
+    assert code == 2
+    assert "new.toml exists already" in err
+    assert (folder / "new.toml").read_text() == "mine"
+
+
+def test_a_plan_far_from_its_extract_is_said_to_need_the_path(folder, command):
+    (folder / "plans").mkdir()
+    _, out, _ = command("outline", folder / "survey.parquet", "--plan", folder / "plans" / "new.toml")
+    assert "put its path into data.files" in out
+
+
+def test_the_version_is_said(command):
+    code, out, _ = command("--version")
+    assert code == 0
+    assert re.fullmatch(r"steelyard \d+\.\d+\.\d+\n", out)
+
+
+def test_a_missing_option_is_named(folder, command):
+    code, _, err = command("run", folder / "study.toml")
+    assert code == 2
+    assert "--out" in err
+
+
+@pytest.mark.parametrize("package", ["typer", "rich", "matplotlib", "jinja2"])
+def test_a_missing_extra_is_named_with_the_command_that_brings_it(package, folder):
+    script = (
+        f"import sys; sys.modules[{package!r}] = None\n"
+        f"sys.argv = ['steelyard', 'run', {str(folder / 'study.toml')!r}, '--out', {str(folder / 'out')!r}]\n"
+        "from steelyard.app import main; main()"
     )
-    time.sleep(delay)
-    process.send_signal(signal.SIGINT)
-    process.communicate(timeout=60)
-    if process.returncode == 0:
-        assert len(os.listdir(tmp_path / "out")) == 5
-    else:
-        assert os.listdir(tmp_path) == []
-
-
-def test_a_missing_extra_is_told(tmp_path):
-    (tmp_path / "typer.py").write_text("raise ImportError('no typer', name='typer')")
-    path = os.pathsep.join([str(tmp_path), os.environ.get("PYTHONPATH", "")])
-    done = steelyard("--version", PYTHONPATH=path)
+    done = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True)
     assert done.returncode == 2
+    assert package in done.stderr
     assert "pip install 'steelyard[app]'" in done.stderr
+    assert "Traceback" not in done.stderr
+    assert not (folder / "out").exists()
+
+
+@pytest.mark.skipif(os.name != "posix", reason="signals as POSIX has them")
+def test_control_c_on_a_real_process_leaves_earlier_results_untouched(folder):
+    (folder / "out").mkdir()
+    for name in FILES:
+        (folder / "out" / name).write_text("earlier")
+    script = (
+        "import sys, time\n"
+        "from steelyard.report import write\n"
+        "def slow(answer, path):\n"
+        "    path.write_bytes(b'half')\n"
+        "    print('writing', flush=True)\n"
+        "    time.sleep(60)\n"
+        "write._write_weights = slow\n"
+        f"sys.argv = ['steelyard', 'run', {str(folder / 'study.toml')!r}, '--out', {str(folder / 'out')!r}]\n"
+        "from steelyard.app import main; main()"
+    )
+    running = subprocess.Popen(
+        [sys.executable, "-c", script], stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
+    )
+    try:
+        assert running.stdout.readline() == "writing\n"
+        time.sleep(0.1)
+        running.send_signal(signal.SIGINT)
+        _, err = running.communicate(timeout=30)
+    finally:
+        running.kill()
+    assert running.returncode == 130
+    assert "Traceback" not in err
+    assert {path.name: path.read_text() for path in (folder / "out").iterdir()} == dict.fromkeys(
+        FILES, "earlier"
+    )

@@ -1,331 +1,364 @@
-"""The command line: run a plan, check an extract, outline one.
+"""The command line: ``steelyard run``, ``steelyard check`` and ``steelyard outline``.
 
-Imports nothing outside the core until a command runs, so that a missing extra can be told in words.
-Annotations are evaluated here, unlike elsewhere: typer reads those of the commands.
+Knows how results and errors are said to a person at a terminal or in a log. Refuses to know how anything
+is computed. What the core does not bring is imported when a command needs it.
 """
 
-import sys
-import warnings
-from collections.abc import Iterator
-from contextlib import contextmanager
-from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Any
+from __future__ import annotations
 
-from steelyard.errors import MissingExtraError, OutputError, SteelyardError
+import importlib
+import os
+import sys
+import traceback
+import warnings
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager, suppress
+from importlib.metadata import version
+from io import TextIOWrapper
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from steelyard.errors import MissingExtraError, OutputError, SteelyardError, SteelyardWarning
 
 if TYPE_CHECKING:
-    import pandas as pd
+    from rich.console import Console
 
     from steelyard.data.checkup import Checkup
-    from steelyard.data.outline import Outline
-    from steelyard.data.passes import Progress
-    from steelyard.results.answer import Answer
+    from steelyard.report.disclosure import Released
+    from steelyard.report.tables import Table
 
-REFUSED, FAILED, INTERRUPTED = 2, 1, 130
+Progress = Callable[[str, int, int], None]
+
+EXTRA = "pip install 'steelyard[app]'"
+FOUND, REFUSED, INTERRUPTED = 1, 2, 130
+LOG_WIDTH = 118
+STRATA_SHOWN = 30
 
 
 def main() -> None:
-    """Run the command line; the installed ``steelyard`` command calls this."""
-    try:
-        commands = _commands()
-    except ImportError as error:
-        _say(
-            MissingExtraError(
-                f"The command line needs {error.name}.", mend="Run: pip install 'steelyard[app]'"
-            )
-        )
-        sys.exit(REFUSED)
-    commands()
+    """Run the command line and leave with its exit code.
+
+    0: done. 1: ``check`` found what a run would refuse. 2: refused, or failed. 130: interrupted.
+    """
+    for stream in (sys.stdout, sys.stderr):
+        # A log in a narrow encoding gets question marks, not a traceback.
+        if isinstance(stream, TextIOWrapper):
+            stream.reconfigure(errors="replace")
+    with _told(trace=False):
+        _require("typer", "rich")
+        application = _application()
+    application()
 
 
-@contextmanager
-def _told(trace: bool) -> Iterator[None]:
-    """Tell what goes wrong in words and leave with its code; with ``trace``, as Python does."""
+def run_study(plan: Path, out: Path, workers: int | None) -> None:
+    """Carry out a plan, write its results and print a short summary.
+
+    Raises
+    ------
+    SteelyardError
+        Anything that would make the answer wrong, or its files incomplete.
+    """
+    _require("matplotlib", "jinja2")
+    from steelyard.report.disclosure import release
+    from steelyard.report.staging import refuse_unusable
+    from steelyard.report.write import write_answer
+    from steelyard.study import Study
+
+    study = Study.read(plan)
+    refuse_unusable(out)
+    with _progress() as progress:
+        answer = study.run(progress=progress, workers=workers)
+    released = release(answer)
+    written = write_answer(answer, out, released)
+    _print_summary(_console(), released, written)
+
+
+def check_study(plan: Path, workers: int | None) -> int:
+    """Print the check-up of a plan's extract and design, and return the exit code."""
+    from steelyard.study import Study
+
+    study = Study.read(plan)
+    with _progress() as progress:
+        checkup = study.check(progress=progress, workers=workers)
+    _print_checkup(_console(), checkup)
+    return FOUND if any(finding.weight == "error" for finding in checkup.findings) else 0
+
+
+def outline_extract(extract: str, plan: Path | None) -> None:
+    """Print the columns of an extract and what may be its design; write a plan to edit if asked.
+
+    Raises
+    ------
+    OutputError
+        The file for the plan exists already, or cannot be written.
+    """
+    from steelyard.data.outline import outline
+    from steelyard.data.source import open_extract
+
+    if plan is not None and plan.exists():
+        raise _taken(plan)
+    folder = plan.parent if plan is not None else Path()
+    found = outline(open_extract(str(Path(extract).absolute()), folder))
+    console = _console()
+    console.print(f"{found.rows:,} rows, {len(found.columns)} columns; looked at {found.looked_at:,} rows.\n")
+    _print_frame(console, "Columns", found.columns.drop(columns=["low", "high"]))
+    for guess in found.guesses:
+        others = f" (or {', '.join(guess.others)})" if guess.others else ""
+        console.print(f"{guess.part}: {', '.join(guess.columns)}{others}\n  {guess.reason}.")
+    if not found.guesses:
+        console.print("No column looks like a part of the design.")
+    if plan is None:
+        console.print("\nA plan to edit: steelyard outline EXTRACT --plan study.toml")
+        return
+    _write_plan(plan, found.plan_text)
+    console.print(f"\nWrote {plan}.", soft_wrap=True)
+    if folder.absolute() not in Path(extract).absolute().parents:
+        console.print("The extract does not lie below the plan's folder: put its path into data.files.")
+
+
+def _application() -> Callable[[], Any]:
     import typer
-
-    try:
-        yield
-    except typer.Exit:
-        raise
-    except KeyboardInterrupt:
-        print("Interrupted: nothing was written.", file=sys.stderr)
-        raise typer.Exit(INTERRUPTED) from None
-    except SteelyardError as error:
-        if trace:
-            raise
-        _say(error)
-        raise typer.Exit(REFUSED) from None
-    except Exception as error:
-        if trace:
-            raise
-        print(f"steelyard failed: {type(error).__name__}: {error}", file=sys.stderr)
-        print(
-            "This is a fault of steelyard's. Run again with --trace to see where it arose.", file=sys.stderr
-        )
-        raise typer.Exit(FAILED) from None
-
-
-def _say(error: SteelyardError) -> None:
-    print(f"steelyard: {error.message}", file=sys.stderr)
-    if error.mend:
-        print(f"  {error.mend}", file=sys.stderr)
-
-
-def _commands() -> Any:
-    import typer
-
-    for needed in ("jinja2", "matplotlib", "rich"):
-        __import__(needed)
 
     app = typer.Typer(
+        name="steelyard",
+        help="Effects of exposures nobody randomised, from household surveys.",
         add_completion=False,
         no_args_is_help=True,
         pretty_exceptions_enable=False,
-        help="What difference does an exposure nobody randomised make? Effects from household surveys, with "
-        "sampling weights, strata and clusters combined with propensity weights.",
+        rich_markup_mode=None,
     )
-    plan_argument = typer.Argument(metavar="PLAN", help="The plan, a TOML file.", show_default=False)
-    workers_option = typer.Option(
-        min=1, help="Threads to work with; default one a processor.", show_default=False
+    plan_file = typer.Argument(..., metavar="PLAN", help="The plan, a TOML file.")
+    extract_files = typer.Argument(
+        ..., metavar="EXTRACT", help="A Parquet file, a folder of them, or a glob in quotes."
     )
-    trace_option = typer.Option("--trace", help="On an error, show where in the program it arose.")
+    out_folder = typer.Option(..., "--out", help="The folder for the results.")
+    threads = typer.Option(None, "--workers", min=1, help="Threads (default: one a processor).")
+    new_plan = typer.Option(None, "--plan", help="Write a plan to edit to this file.")
+    with_trace = typer.Option(False, "--trace", help="If something fails, show where.")
 
-    @app.callback(invoke_without_command=True)
-    def version(
-        context: typer.Context,
-        show: Annotated[bool, typer.Option("--version", help="Print the version and exit.")] = False,
-    ) -> None:
-        if show:
-            from importlib.metadata import version
-
+    def show_version(wanted: bool) -> None:
+        if wanted:
             print(f"steelyard {version('steelyard')}")
             raise typer.Exit
-        if context.invoked_subcommand is None:
-            print(context.get_help())
+
+    about = typer.Option(False, "--version", is_eager=True, callback=show_version, help="Say the version.")
+
+    @app.callback()
+    def steelyard(version: bool = about) -> None:
+        """Effects of exposures nobody randomised, from household surveys."""
 
     @app.command()
     def run(
-        plan: Annotated[Path, plan_argument],
-        out: Annotated[Path, typer.Option(help="Directory for the five result files.", show_default=False)],
-        workers: Annotated[int | None, workers_option] = None,
-        trace: Annotated[bool, trace_option] = False,
+        plan: Path = plan_file,
+        out: Path = out_folder,
+        workers: int | None = threads,
+        trace: bool = with_trace,
     ) -> None:
-        """Carry out a plan: effects.csv, balance.csv, weights.parquet, report.html and record.json.
-
-        The files are written beside and renamed into place at the end, all or none.
-        """
+        """Do the whole job: check, weight, compare, estimate; write the results and a report."""
         with _told(trace):
-            from steelyard.report.write import write_answer
-            from steelyard.study import Study
-
-            study = Study.read(plan)
-            with warnings.catch_warnings(), _progress() as progress:
-                # The warnings are printed with the summary, and stand in the report.
-                warnings.simplefilter("ignore")
-                answer = study.run(workers=workers, progress=progress)
-                progress("writing the results", 0, 1)
-                files = write_answer(answer, out)
-                progress("writing the results", 1, 1)
-            _summary(answer, files)
+            run_study(plan, out, workers)
 
     @app.command()
-    def check(
-        plan: Annotated[Path, plan_argument],
-        workers: Annotated[int | None, workers_option] = None,
-        trace: Annotated[bool, trace_option] = False,
-    ) -> None:
-        """Check the extract and the design of a plan; nothing is estimated.
-
-        Exits with 1 where a run would refuse the extract as it is.
-        """
+    def check(plan: Path = plan_file, workers: int | None = threads, trace: bool = with_trace) -> None:
+        """Check the extract and the design, nothing estimated; exit code 1 if a run would refuse them."""
         with _told(trace):
-            from steelyard.study import Study
+            code = check_study(plan, workers)
+        raise typer.Exit(code)
 
-            study = Study.read(plan)
-            with _progress() as progress:
-                checkup = study.check(workers=workers, progress=progress)
-            _checkup(checkup, study.report.minimum_count)
-            if any(finding.weight == "error" for finding in checkup.findings):
-                raise typer.Exit(FAILED)
-
-    @app.command(name="outline")
-    def outline_command(
-        extract: Annotated[
-            list[str], typer.Argument(metavar="EXTRACT...", help="Parquet files, a glob or a folder.")
-        ],
-        plan: Annotated[
-            Path | None, typer.Option(help="Also write a plan to edit to this file.", show_default=False)
-        ] = None,
-        trace: Annotated[bool, trace_option] = False,
-    ) -> None:
-        """Look at an extract: columns, types, likely design columns, and a plan to edit."""
+    @app.command()
+    def outline(extract: str = extract_files, plan: Path | None = new_plan, trace: bool = with_trace) -> None:
+        """Show the columns of an extract and what may be its design, and draft a plan."""
         with _told(trace):
-            from steelyard.data.outline import outline
-            from steelyard.data.source import open_extract
-
-            # File names in the plan to edit start at its folder.
-            folder = plan.parent if plan is not None else Path()
-            found = outline(open_extract([str(Path(name).absolute()) for name in extract], folder))
-            _outline(found)
-            if plan is None:
-                print(found.plan_text)
-            else:
-                _write_new(plan, found.plan_text)
-                print(f"Wrote {plan}: edit it, then run: steelyard check {plan}")
+            outline_extract(extract, plan)
 
     return app
 
 
+def _require(*packages: str) -> None:
+    for package in packages:
+        try:
+            importlib.import_module(package)
+        except ImportError as error:
+            if error.name != package:
+                raise
+            raise MissingExtraError(
+                f"The command line needs {package}, which is not installed.", mend=EXTRA
+            ) from None
+
+
 @contextmanager
-def _progress() -> "Iterator[Progress]":
-    """Give a progress callback: a moving bar on a terminal, nothing in a log."""
-    from rich.console import Console
-    from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeElapsedColumn
-
-    console = Console(stderr=True)
-    if not console.is_terminal:
-        yield lambda what, done, total: None
-        return
-    columns = (TextColumn("{task.description:<44}"), BarColumn(), MofNCompleteColumn(), TimeElapsedColumn())
-    with Progress(*columns, console=console, transient=True) as bars:
-        task = bars.add_task("", total=None)
-        current = ""
-
-        def tell(what: str, done: int, total: int) -> None:
-            nonlocal current
-            if what != current:
-                bars.reset(task, description=what, total=total)
-                current = what
-            bars.update(task, completed=done, total=total)
-
-        yield tell
-
-
-def _table(frame: "pd.DataFrame", title: str, right: tuple[str, ...] = ()) -> None:
-    """Print a frame of texts: a ruled table on a terminal and in a log alike."""
-    from rich.box import SIMPLE_HEAD
-    from rich.console import Console
-    from rich.table import Table
-    from rich.text import Text
-
-    console = Console(highlight=False, width=None if sys.stdout.isatty() else 120)
-    table = Table(title=title, title_justify="left", box=SIMPLE_HEAD, pad_edge=False, title_style="bold")
-    for name in frame.columns:
-        table.add_column(Text(str(name)), justify="right" if name in right else "left", overflow="fold")
-    for row in frame.itertuples(index=False):
-        table.add_row(*(Text(str(cell)) for cell in row))
-    console.print(table)
-
-
-def _summary(answer: "Answer", files: tuple[Path, ...]) -> None:
-    import numpy as np
-    import pandas as pd
-
-    from steelyard.report.disclosure import shown
-    from steelyard.report.numbers import fixed, interval, number, p_value
-
-    tables = shown(answer)
-    rows = [
-        {
-            "outcome": row["outcome"],
-            "measure": row["measure"],
-            "exposed": number(row["exposed"]),
-            "reference": number(row["reference"]),
-            "effect": number(row["estimate"]),
-            "std. error": number(row["std_error"]),
-            "interval": interval(row["ci_low"], row["ci_high"]),
-            "p": p_value(row["p_value"]),
-        }
-        for row in tables.effects.to_dict("records")
-    ]
-    plan = answer.plan
-    title = f"Effects ({plan.exposure.estimand}), {plan.variance.confidence:.0%} intervals"
-    _table(pd.DataFrame(rows), title, ("exposed", "reference", "effect", "std. error", "interval", "p"))
-    smd = {
-        when: np.nanmax(tables.balance[f"smd_{when}"].abs().to_numpy(), initial=0)
-        for when in ("before", "after")
-    }
-    print(
-        f"Largest |SMD|: {fixed(smd['before'])} before, {fixed(smd['after'])} after (0.1 is common practice)."
-    )
-    sizes = [f"{row.group} {number(row.effective_after)}" for row in tables.groups.itertuples()]
-    print(f"Effective sizes under the combined weights: {', '.join(sizes)}.")
-    for text in (*answer.warnings, *tables.hidden):
-        print(f"Note: {text}")
-    print(
-        "Nobody randomised the exposure: unmeasured confounding remains possible. See the cautions in the report."
-    )
-    print("Wrote " + ", ".join(str(path) for path in files))
-
-
-def _checkup(checkup: "Checkup", minimum: int) -> None:
-    import pandas as pd
-
-    from steelyard.report.numbers import number, percent
-
-    _table(checkup.facts.astype(str), "The extract and the design", ("value",))
-    weights = checkup.weights.copy()
-    for name in ("all_rows", "domain_rows"):
-        weights[name] = [number(value, 4) for value in weights[name]]
-    _table(
-        weights.rename(columns=lambda n: n.replace("_", " ")), "Sampling weights", ("all rows", "domain rows")
-    )
-    if len(checkup.exclusions):
-        _table(
-            checkup.exclusions.assign(share=checkup.exclusions["share"].map(percent)),
-            "Rows left out of the domain",
-            ("rows", "share"),
-        )
-    missing = checkup.missing.copy()
-    for name in ("share", "share_exposed", "share_reference"):
-        missing[name] = missing[name].map(percent)
-    _table(
-        missing.rename(columns=lambda n: n.replace("_", " ")),
-        "Missing answers, where the domain holds",
-        ("missing", "share", "share exposed", "share reference"),
-    )
-    strata = checkup.strata.rename(columns=lambda n: n.replace("_", " "))
-    most = 40
-    title = "Strata" if len(strata) <= most else f"Strata (the first {most} of {len(strata)})"
-    _table(strata.head(most), title, tuple(strata.columns[1:]))
-    if checkup.findings:
-        rows = [(f.weight, f"{f.message} {f.mend}") for f in checkup.findings]
-        _table(pd.DataFrame(rows, columns=["weight", "finding"]), "Findings")
-    else:
-        print("Nothing to mend.")
-    print(f"Counts here are for the analyst's eyes; results hide those under {minimum}.")
-
-
-def _write_new(path: Path, text: str) -> None:
+def _told(trace: bool) -> Iterator[None]:
+    """Turn what goes wrong into a message and an exit code; warnings of the house are for the summary."""
     try:
-        with path.open("x", encoding="utf-8") as file:
-            file.write(text)
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore", SteelyardWarning)
+            yield
+    except KeyboardInterrupt:
+        print("Interrupted. Nothing half-written is left.", file=sys.stderr)
+        _leave(INTERRUPTED)
+    except SteelyardError as error:
+        if trace:
+            traceback.print_exc()
+        print(f"Error: {error.message}", file=sys.stderr)
+        if error.mend:
+            print(error.mend, file=sys.stderr)
+        _leave(REFUSED)
+    except Exception as error:
+        if trace:
+            traceback.print_exc()
+        else:
+            print(f"Unexpected {type(error).__name__}: {error}", file=sys.stderr)
+            print("This is a defect of steelyard. Run again with --trace to see where.", file=sys.stderr)
+        _leave(REFUSED)
+
+
+def _leave(code: int) -> None:
+    raise SystemExit(code)
+
+
+def _console(stderr: bool = False) -> Console:
+    """Return a console without markup, since labels of the data may look like it; plain where it is no terminal."""
+    from rich.console import Console
+
+    console = Console(stderr=stderr, markup=False, highlight=False, emoji=False)
+    if not console.is_terminal and "COLUMNS" not in os.environ:
+        console.width = LOG_WIDTH
+    return console
+
+
+@contextmanager
+def _progress() -> Iterator[Progress]:
+    """Give a callback for progress: bars on a terminal, else one line for each kind of work, when it is done."""
+    from rich.progress import BarColumn, MofNCompleteColumn, TextColumn, TimeElapsedColumn
+    from rich.progress import Progress as Bars
+
+    console = _console(stderr=True)
+    if not console.is_terminal or console.is_dumb_terminal:
+        seen: set[str] = set()
+
+        def write(what: str, done: int, total: int) -> None:
+            if done == total and what not in seen:
+                seen.add(what)
+                print(f"{what}: done", file=sys.stderr)
+
+        yield write
+        return
+    columns = (
+        TextColumn("{task.description}", markup=False),
+        BarColumn(),
+        MofNCompleteColumn(),
+        TimeElapsedColumn(),
+    )
+    with Bars(*columns, console=console, transient=True) as bars:
+        tasks: dict[str, Any] = {}
+
+        def move(what: str, done: int, total: int) -> None:
+            if what not in tasks:
+                tasks[what] = bars.add_task(what, total=total)
+            bars.update(tasks[what], completed=done, total=total)
+
+        yield move
+
+
+def _print_summary(console: Console, released: Released, written: tuple[Path, ...]) -> None:
+    from steelyard.report import tables, words
+
+    console.print(released.plan.title or "Effects", style="bold")
+    console.print(released.target)
+    console.print()
+    _print_table(console, tables.effects_summary_table(released))
+    _say(console, f"Balance: {words.balance_finding(released)}")
+    _say(console, f"Effective sizes: {words.effective_sizes(released)}")
+    if released.warnings:
+        console.print(f"\nWarnings ({len(released.warnings)}):", style="bold")
+        for warning in released.warnings:
+            _say(console, f"- {warning}")
+    if released.minimum:
+        _say(console, f"\nCounts under {released.minimum} are hidden here and in the report.")
+    console.print("\nWritten:")
+    for path in written:
+        console.print(f"  {path}", soft_wrap=True)
+
+
+def _print_checkup(console: Console, checkup: Checkup) -> None:
+    from steelyard.report import tables
+
+    _print_table(console, tables.facts_table(checkup))
+    _print_table(console, tables.weights_table(checkup))
+    _print_table(console, tables.exclusions_table(checkup))
+    strata = tables.strata_table(checkup)
+    if len(strata.rows) > STRATA_SHOWN:
+        few = tables.strata_table(checkup, fewest_psus=STRATA_SHOWN)
+        _print_table(console, few)
+        console.print(f"The {STRATA_SHOWN} of {len(strata.rows)} strata with the fewest PSUs are shown.\n")
+    else:
+        _print_table(console, strata)
+    _print_table(console, tables.missing_table(checkup))
+    if not checkup.findings:
+        console.print("The check-up found nothing to mend.")
+    for finding in checkup.findings:
+        _say(console, f"{finding.weight}: {finding.message}")
+        _say(console, f"  {finding.mend}")
+    console.print("\nCounts are shown in full: not for release.")
+
+
+def _print_table(console: Console, table: Table) -> None:
+    from rich import box
+    from rich.table import Table as Grid
+
+    from steelyard.report.numbers import plain
+
+    if not table.rows:
+        console.print(f"{table.caption}: none.\n")
+        return
+    grid = Grid(
+        title=table.caption, title_justify="left", title_style="bold",
+        box=box.SIMPLE_HEAD, pad_edge=False, padding=(0, 1, 0, 0),
+    )  # fmt: skip
+    for place, name in enumerate(table.columns):
+        text = place < table.text_columns
+        grid.add_column(plain(name), justify="left" if text else "right", overflow="fold")
+    for row in table.rows:
+        grid.add_row(*(plain(cell) for cell in row))
+    console.print(grid)
+    if table.note:
+        _say(console, f"{table.note}\n")
+
+
+def _print_frame(console: Console, caption: str, frame: Any) -> None:
+    from steelyard.report.tables import frame_table
+
+    _print_table(console, frame_table(caption, frame))
+
+
+def _say(console: Console, text: str) -> None:
+    from steelyard.report.numbers import plain
+
+    console.print(plain(text))
+
+
+def _taken(plan: Path) -> OutputError:
+    return OutputError(f"{plan} exists already.", mend="Give another name, or remove the file.")
+
+
+def _write_plan(plan: Path, text: str) -> None:
+    """Write a new file, or leave none."""
+    try:
+        with plan.open("x", encoding="utf-8", newline="\n") as file:
+            try:
+                file.write(text)
+                file.flush()
+            except BaseException:
+                with suppress(OSError):
+                    plan.unlink()
+                raise
+    except FileExistsError:
+        raise _taken(plan) from None
     except OSError as error:
         raise OutputError(
-            f"The plan cannot be written to {path}: {error.strerror}.",
-            mend="Name a file that does not exist.",
-        ) from None
-
-
-def _outline(found: "Outline") -> None:
-    import pandas as pd
-
-    from steelyard.report.numbers import percent
-
-    columns = found.columns.drop(columns=["low", "high"])
-    columns["missing"] = columns["missing"].map(percent)
-    columns["distinct"] = [
-        "over 1,000" if pd.isna(count) else f"{int(count):,}" for count in columns["distinct"]
-    ]
-    _table(columns, f"{found.rows:,} rows, the first {found.looked_at:,} looked at", ("missing", "distinct"))
-    if not found.guesses:
-        print("No column looks like part of the design.")
-        return
-    rows = [
-        (g.part, ", ".join(g.columns), g.reason + (f"; or {', '.join(g.others)}" if g.others else ""))
-        for g in found.guesses
-    ]
-    _table(pd.DataFrame(rows, columns=["may be", "columns", "because"]), "Likely design columns: check each")
+            f"The plan cannot be written to {plan}: {error.strerror or error}.",
+            mend="Check the folder and the disk.",
+        ) from error
 
 
 if __name__ == "__main__":

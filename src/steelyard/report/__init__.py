@@ -1,1 +1,1 @@
-"""What leaves the house: figures, HTML, tables and the record of a run, with small counts hidden."""
+"""The report of an answer: figures, tables, one HTML page, and the files of a run."""

@@ -1,226 +1,232 @@
-"""The report's sentences: what was asked, what came out, how it was done, and what to beware of."""
+"""An answer in plain sentences: what was asked, what was found, and how fragile it is."""
 
 from __future__ import annotations
 
-import numpy as np
+import math
+from typing import Any
 
-from steelyard.plan import Outcome, Plan
-from steelyard.report.numbers import fixed, interval, number, p_value
-from steelyard.results.answer import Answer
+from steelyard.plan import Exposure, Plan
+from steelyard.report.disclosure import Released
+from steelyard.report.numbers import common_decimals, decimals_for, fixed, p_value, percent, significant
+from steelyard.report.suppression import is_hidden
 
-MEASURES = {"difference": "difference in means", "ratio": "ratio of means", "odds-ratio": "odds ratio"}
-BETWEEN = {"difference": "difference between", "ratio": "ratio of", "odds-ratio": "odds ratio from"}
-WHOM = {
-    "ATE": "for everybody in the domain",
-    "ATT": "for the exposed in the domain",
-    "ATC": "for the reference group in the domain",
-    "ATO": "for those whose exposure could have gone either way",
+BAND = 0.1
+
+_WHO = {
+    "ATE": "the whole population of the domain: everybody exposed compared with nobody exposed",
+    "ATT": "the exposed: as they are, compared with what would be seen had they not been exposed",
+    "ATC": "the reference population: as it is, compared with what would be seen had it been exposed",
+    "ATO": "the overlap population, persons who could well have been in either group",
 }
-TREATMENTS = {
-    "refuse": "",
-    "recentre": "Strata with one PSU contributed their deviation from the mean of all PSUs.",
-    "collapse": "Strata with one PSU were joined with their neighbour.",
-    "self-representing": "PSUs alone in their stratum were taken as chosen with certainty.",
+_NAMES = {
+    "ATE": "average effect in the population",
+    "ATT": "average effect in the exposed",
+    "ATC": "average effect in the reference population",
+    "ATO": "average effect in the overlap population",
 }
-
-REFERENCES = {
-    "binder": "Binder, D. A. (1983). On the variances of asymptotically normal estimators from complex surveys. "
-    "International Statistical Review 51, 279–292.",
-    "wolter": "Wolter, K. M. (2007). Introduction to Variance Estimation, 2nd ed. Springer.",
-    "lunceford": "Lunceford, J. K. and Davidian, M. (2004). Stratification and weighting via the propensity score in "
-    "estimation of causal treatment effects. Statistics in Medicine 23, 2937–2960.",
-    "zeng": "Zeng, Y., Li, F. and Tong, G. (2025). Survey-weighted propensity score estimators. arXiv 2501.16156.",
-    "rosenbaum": "Rosenbaum, P. R. and Rubin, D. B. (1983). The central role of the propensity score in observational "
-    "studies for causal effects. Biometrika 70, 41–55.",
-    "li": "Li, F., Morgan, K. L. and Zaslavsky, A. M. (2018). Balancing covariates via propensity score weighting. "
-    "Journal of the American Statistical Association 113, 390–400.",
-    "kish": "Kish, L. (1965). Survey Sampling. Wiley.",
-    "korn": "Korn, E. L. and Graubard, B. I. (1990). Simultaneous testing of regression coefficients with complex "
-    "survey data: use of Bonferroni t statistics. The American Statistician 44, 270–276.",
-    "imai": "Imai, K. and Ratkovic, M. (2014). Covariate balancing propensity score. Journal of the Royal Statistical "
-    "Society B 76, 243–263.",
-    "vanderweele": "VanderWeele, T. J. and Ding, P. (2017). Sensitivity analysis in observational research: "
-    "introducing the E-value. Annals of Internal Medicine 167, 268–274.",
-}
+MEASURES = {"difference": "difference of means", "ratio": "ratio of means", "odds-ratio": "odds ratio"}
+COMPARISONS = {"difference": "difference", "ratio": "ratio", "odds-ratio": "odds ratio"}
 
 
-def question(answer: Answer) -> str:
-    """Return what was asked, as one sentence."""
-    plan = answer.plan
-    exposed, reference = answer.overlap.groups["level"]
-    names = _listed([outcome.name for outcome in plan.outcome])
-    domain = f" among rows where {plan.data.domain}" if plan.data.domain else ""
-    return (
-        f"What difference does {exposure_name(plan)} ({exposed} against {reference}) make to {names}{domain}, "
-        f"{WHOM[plan.exposure.estimand]} ({plan.exposure.estimand})?"
-    )
-
-
-def exposure_name(plan: Plan) -> str:
+def exposure_name(exposure: Exposure) -> str:
     """Return the exposure's column."""
-    return plan.exposure.formula.partition("~")[0].strip()
+    return exposure.formula.split("~", 1)[0].strip()
 
 
-def finding(outcome: Outcome, row: dict[str, float], confidence: float) -> str:
-    """Return one effect in words."""
-    if not np.isfinite(row["estimate"]):
-        return f"{outcome.name}: hidden, the groups are too small to show."
-    level = f"{confidence:.0%}"
-    text = (
-        f"{outcome.name}: {MEASURES[outcome.measure]} {number(row['estimate'])} "
-        f"({level} interval {interval(row['ci_low'], row['ci_high'])}; p {_equals(p_value(row['p_value']))})"
-    )
-    if np.isfinite(row["exposed"]):
-        text += (
-            f", with weighted means {number(row['exposed'])} in the exposed and {number(row['reference'])} in "
-            "the reference"
-        )
-    none = 0 if outcome.measure == "difference" else 1
-    if row["ci_low"] <= none <= row["ci_high"]:
-        return text + ". The interval includes no difference."
-    higher = row["estimate"] > none
-    return text + f". The interval lies {'above' if higher else 'below'} no difference."
+def covariates_of(exposure: Exposure) -> str:
+    """Return the right-hand side of the exposure formula, on one line."""
+    return " ".join(exposure.formula.split("~", 1)[1].split())
 
 
-def cost_of_known(answer: Answer) -> str:
-    """Return what treating the propensity as known would have done to the standard errors."""
-    ratio = answer.effects_known.bse / answer.effects.bse
-    if answer.plan.variance.propensity == "known":
-        return (
-            "The plan treats the propensity as known, so these standard errors leave out that it was estimated: "
-            "set variance.propensity to “estimated” to count it."
-        )
-    low, high = ratio.min(), ratio.max()
-    if not np.isfinite(low):
-        return ""
-    spread = fixed(low) if fixed(low) == fixed(high) else f"{fixed(low)} to {fixed(high)}"
-    return (
-        f"Treated as known, the propensity would have given standard errors {spread} times these: estimating it is "
-        "part of the design of the weights, and counts."
-    )
+def level_of(plan: Plan, groups: Any, group: str) -> str:
+    """Return a level of the exposure with its column, as in ``piped = 1``."""
+    level = groups.loc[groups["group"] == group, "level"].iloc[0]
+    return f"{exposure_name(plan.exposure)} = {level}"
 
 
-def methods(answer: Answer) -> tuple[str, tuple[str, ...]]:
-    """Return a paragraph of methods to paste into a paper, and exactly the references it uses."""
-    plan, table = answer.plan, answer.effects.table
-    exposure, design = plan.exposure, plan.design
-    used = ["rosenbaum", "binder", "wolter", "lunceford", "zeng", "li"]
-    weighted = "under the sampling weights" if exposure.weighted else "without sampling weights"
-    text = [
-        f"The propensity of {exposure_name(plan)} was modelled by {exposure.link} regression "
-        f"({exposure.formula.partition('~')[2].strip()}), fitted by maximum pseudo-likelihood {weighted} "
-        "(Rosenbaum & Rubin 1983; Binder 1983).",
-        f"Balancing weights for the {exposure.estimand} (Li, Morgan & Zaslavsky 2018) were multiplied by the "
-        "sampling weights; balance and outcomes were computed under these combined weights.",
+def estimand_name(estimand: str) -> str:
+    """Return the estimand in words."""
+    return _NAMES[estimand]
+
+
+def domain_name(plan: Plan) -> str:
+    """Return the domain, or that it is everybody."""
+    return plan.data.domain or "all rows of the extract"
+
+
+def listed(names: list[str]) -> str:
+    """Return names as a list in a sentence."""
+    return names[0] if len(names) == 1 else f"{', '.join(names[:-1])} and {names[-1]}"
+
+
+def question(released: Released) -> list[str]:
+    """Say what was asked: the comparison, for whom, and who is left out."""
+    plan = released.plan
+    outcomes = listed(list(dict.fromkeys(outcome.name for outcome in plan.outcome)))
+    where = f"in the domain {plan.data.domain}" if plan.data.domain else "in the whole extract"
+    return [
+        f"What difference does {exposure_name(plan.exposure)} make to {outcomes}, {where}? The exposed are the rows "
+        f"with {level_of(plan, released.groups, 'exposed')}, the reference those with "
+        f"{level_of(plan, released.groups, 'reference')}.",
+        f"The answer is for {_WHO[plan.exposure.estimand]} ({plan.exposure.estimand}, the "
+        f"{_NAMES[plan.exposure.estimand]}).",
+        "Nobody randomised the exposure. Rows are weighted so that the two groups agree in "
+        f"{covariates_of(plan.exposure)}, and so that the sample stands for its population.",
     ]
-    if exposure.stabilize:
-        text.append("The balancing weights were stabilized by the weighted share of each group.")
-    if exposure.propensity_range is not None or exposure.cap_quantile is not None:
-        text.append(answer.overlap.target.partition(". ")[2] or answer.overlap.target)
-    for outcome in plan.outcome:
-        text.append(_outcome_method(outcome))
-    row = table.iloc[0]
-    units = f"{row['psus']:,} PSUs" if design.clusters else f"{row['psus']:,} rows, each its own PSU,"
-    strata = f" in {row['strata']:,} strata" if design.strata else ""
-    text.append(
-        f"Variances were estimated by Taylor linearization (Binder 1983; Wolter 2007) from {units}{strata}"
-        + (
-            f", with finite population corrections at {len(design.population)} stage(s)"
-            if design.population
-            else ""
-        )
-        + "."
-    )
-    if plan.variance.propensity == "estimated":
-        text.append(
-            "They include the estimation of the propensity through stacked estimating equations (Lunceford & "
-            "Davidian 2004; Zeng, Li & Tong 2025)."
-        )
-    else:
-        text.append("The propensity was treated as known.")
-        used = [name for name in used if name not in {"lunceford", "zeng"}]
-    if TREATMENTS[design.single_psu] and (answer.checkup.strata["psus"] == 1).any():
-        text.append(TREATMENTS[design.single_psu])
-    text.append(
-        f"Intervals ({plan.variance.confidence:.0%}) and tests use Student's t with {row['df']:g} degrees of freedom "
-        "(PSUs minus strata)."
-    )
-    text.append(
-        "Balance was described by differences standardized by the sampling-weighted standard deviation, variance "
-        "ratios and weighted Kolmogorov–Smirnov distances, and tested by an adjusted Wald F test (Korn & Graubard "
-        "1990)"
-        + (
-            ""
-            if answer.balance.over_identification is None
-            else " and by the over-identification test of "
-            "the propensity's moment conditions (Imai & Ratkovic 2014)"
-        )
-        + "."
-    )
-    text.append(
-        "Effective sample sizes follow Kish (1965). Sensitivity to unmeasured confounding is given by E-values "
-        "(VanderWeele & Ding 2017)."
-    )
-    used += (
-        ["korn"] + ([] if answer.balance.over_identification is None else ["imai"]) + ["kish", "vanderweele"]
-    )
-    used.sort(key=lambda name: REFERENCES[name])
-    version = answer.record["versions"]["steelyard"]  # type: ignore[index]
-    text.append(f"Computed with steelyard {version}.")
-    return " ".join(text), tuple(REFERENCES[name] for name in used)
 
 
-def _outcome_method(outcome: Outcome) -> str:
-    if not outcome.covariates:
-        return f"The effect on {outcome.name} is the {BETWEEN[outcome.measure]} the groups' weighted (Hájek) means."
-    link = {"difference": "identity", "ratio": "log", "odds-ratio": "logit"}[outcome.measure]
-    back = "" if outcome.measure == "difference" else " exponential of the"
+def confidence(plan: Plan) -> str:
+    """Return the level of the intervals, as in ``95%``."""
+    return f"{100 * plan.variance.confidence:g}%"
+
+
+def effect_decimals(row: dict[str, Any]) -> int:
+    """Return how many decimals an effect deserves: its standard error to two significant digits."""
+    if is_hidden(row["std_error"]):
+        return 3
+    if row["std_error"] > 0:
+        return decimals_for(row["std_error"])
+    return common_decimals([row["estimate"]], 3)
+
+
+def mean_decimals(row: dict[str, Any]) -> int:
+    """Return the decimals of the groups' means, three significant digits of the smaller one at least."""
+    if is_hidden(row["exposed"]):
+        return 3
+    least = common_decimals([row["exposed"], row["reference"]], 3)
+    return max(least, effect_decimals(row) if row["measure"] == "difference" else 0)
+
+
+def glance(row: dict[str, Any], plan: Plan) -> dict[str, str]:
+    """Return one effect in words: ``name``, ``figure``, ``interval``, ``means``, ``reading``."""
+    measure = COMPARISONS[row["measure"]]
+    name = str(row["outcome"])
+    if is_hidden(row["estimate"]):
+        return {
+            "name": name,
+            "measure": measure,
+            "figure": str(row["estimate"]),
+            "interval": "",
+            "means": "",
+            "reading": "A group is too small for the effect to be shown.",
+        }
+    places = effect_decimals(row)
+    interval = f"{fixed(row['ci_low'], places)} to {fixed(row['ci_high'], places)}"
+    means = mean_decimals(row)
+    return {
+        "name": name,
+        "measure": measure,
+        "figure": fixed(row["estimate"], places),
+        "interval": f"{confidence(plan)} interval {interval}",
+        "means": "The groups' means rest on too few rows to be shown."
+        if is_hidden(row["exposed"])
+        else f"Weighted mean {fixed(row['exposed'], means)} in the exposed, "
+        f"{fixed(row['reference'], means)} in the reference.",
+        "reading": _reading(row, places),
+    }
+
+
+def _reading(row: dict[str, Any], places: int) -> str:
+    none = 0.0 if row["measure"] == "difference" else 1.0
+    estimate, low, high = row["estimate"], row["ci_low"], row["ci_high"]
+    if math.isnan(low) or math.isnan(high):
+        return "The design leaves no interval, so the data do not say how sure this is."
+    if low <= none <= high:
+        return (
+            f"No effect ({none:g}) lies inside the interval: the data agree with effects in both directions."
+        )
+    higher = estimate > none
+    size = {
+        "difference": f"{significant(abs(estimate), 2)} {'higher' if higher else 'lower'} with exposure",
+        "ratio": f"{fixed(estimate, places)} times what it is without exposure",
+        "odds-ratio": f"{fixed(estimate, places)} times what they are without exposure",
+    }[row["measure"]]
+    what = "odds" if row["measure"] == "odds-ratio" else "mean"
+    verb = "are" if row["measure"] == "odds-ratio" else "is"
+    return f"The {what} of {row['outcome']} {verb} {size}; no effect ({none:g}) lies outside the interval."
+
+
+def cost_of_ignoring(effects: list[dict[str, Any]], known: list[dict[str, Any]], plan: Plan) -> str:
+    """Say what standard errors that treat the propensity as known would have claimed."""
+    if plan.variance.propensity == "known":
+        return (
+            "The plan asks for standard errors that treat the propensity as known, as if nobody had estimated it. "
+            'That is wrong in either direction; set variance.propensity = "estimated" to count it.'
+        )
+    parts = []
+    for row, other in zip(effects, known, strict=True):
+        if is_hidden(row["std_error"]) or not row["std_error"] > 0:
+            continue
+        change = other["std_error"] / row["std_error"] - 1
+        if abs(change) < 0.005:
+            parts.append(f"the same for {row['outcome']} ({COMPARISONS[row['measure']]})")
+        else:
+            word = "larger" if change > 0 else "smaller"
+            parts.append(
+                f"{percent(abs(change), 0)} {word} for {row['outcome']} ({COMPARISONS[row['measure']]})"
+            )
+    if not parts:
+        return ""
     return (
-        f"The effect on {outcome.name} is the{back} coefficient of the exposure in a weighted {outcome.family} "
-        f"regression with {link} link, adjusted for {outcome.covariates}."
+        "Had the propensity been treated as known, the standard errors would have been "
+        f"{listed(parts)}. The intervals of this report count its estimation."
     )
 
 
-CAUTIONS = (
-    (
-        "Unmeasured confounding",
-        "Nobody randomised the exposure. Weighting balances the covariates in the model and says nothing about those "
-        "that are not. The E-values say how strong an unmeasured confounder would have to be; whether one exists is "
-        "a question for people who know the field.",
-    ),
-    (
-        "Overlap",
-        "Where hardly anybody with the same covariates has the other level of exposure, the effect rests on the "
-        "model. Look at the overlap before the estimate.",
-    ),
-    (
-        "Small bases",
-        "Few PSUs, few rows in a group or few rows that carry most of the weight make standard errors themselves "
-        "uncertain. Read the degrees of freedom and the effective sizes beside every interval.",
-    ),
-    (
-        "Missing answers",
-        "Rows with a missing covariate or outcome leave the domain. If those who did not answer differ, so may the "
-        "effect.",
-    ),
-    (
-        "Disclosure of persons",
-        "Small counts are hidden in this report and its tables, by rules that any office starts from. They do not "
-        "replace the local rules: have a disclosure officer pass what leaves the house. The weight file is about "
-        "single persons and is not for release.",
-    ),
-    (
-        "Rules of thumb",
-        "Limits such as |SMD| below 0.1, a variance ratio from 0.5 to 2, or p above 0.05 are common practice, not "
-        "verdicts. Qualified review decides whether an effect may be claimed.",
-    ),
-)
+def fragility(row: dict[str, Any]) -> str:
+    """Say what an E-value means for one outcome."""
+    if is_hidden(row["e_value"]):
+        return "A group is too small for the effect to be shown."
+    value, limit = significant(row["e_value"], 3), significant(row["e_value_limit"], 3)
+    text = (
+        f"Risk ratios of {value} with the exposure and with {row['outcome']}, beyond the covariates, would explain the "
+        "estimate away; "
+    )
+    if row["e_value_limit"] <= 1:
+        return text + "no effect lies inside the interval already."
+    return text + f"{limit} each would move the interval to no effect."
 
 
-def _equals(text: str) -> str:
-    return text if text.startswith("<") else f"= {text}"
+def joint_test(test: Any) -> str:
+    """Return a joint test as one phrase."""
+    numerator, denominator = test.df
+    if math.isnan(test.statistic):
+        return "not defined on the degrees of freedom of the design"
+    value = fixed(test.statistic, 2)
+    p = p_value(test.p_value)
+    p = f"p {p}" if p.startswith("<") else f"p = {p}"
+    if denominator is None:
+        return f"chi-square = {value} on {numerator:g} df, {p}"
+    return f"F = {value} on {numerator:g} and {denominator:g} df, {p}"
 
 
-def _listed(names: list[str]) -> str:
-    names = list(dict.fromkeys(names))
-    return names[0] if len(names) == 1 else ", ".join(names[:-1]) + " and " + names[-1]
+def effective_sizes(released: Released) -> str:
+    """Say how many rows of equal weight each group is worth, before and after."""
+    if released.groups_hidden:
+        return "hidden, a group is too small."
+    return (
+        "; ".join(
+            f"{row.group} {fixed(row.effective_before, 0)} before, {fixed(row.effective_after, 0)} after"
+            for row in released.groups.itertuples()
+        )
+        + "."
+    )
+
+
+def balance_finding(released: Released) -> str:
+    """Say how many terms lie in the band before and after, and which differs most."""
+    if released.groups_hidden:
+        return "A group is too small for the comparison to be shown."
+    shown = released.balance[~released.balance["smd_after"].map(is_hidden)].dropna(
+        subset=["smd_before", "smd_after"]
+    )
+    if not len(shown):
+        return "No term can be shown."
+    before, after = (shown[f"smd_{when}"].astype(float).abs() for when in ("before", "after"))
+    worst = shown.loc[after.idxmax()]
+    name = f"{worst['term']}: {worst['level']}" if worst["level"] else worst["term"]
+    return (
+        f"Of {len(shown)} terms shown, {int((before > BAND).sum())} differ by more than {BAND} standard deviations "
+        f"under the sampling weights and {int((after > BAND).sum())} under the combined weights. The largest "
+        f"difference was {fixed(before.max(), 2)} and is {fixed(after.max(), 2)} ({name})."
+    )

@@ -1,0 +1,92 @@
+"""The methods paragraph says what the plan asks for, and cites exactly what it lists."""
+
+from __future__ import annotations
+
+import re
+from dataclasses import replace
+
+import pytest
+from report_answers import made_answer, made_plan
+
+from steelyard.plan import Design, Exposure, Outcome, Variance
+from steelyard.report.methods import REFERENCES, methods
+
+PLAIN = Exposure(formula="piped ~ urban")
+
+
+def told(**changes):
+    answer = made_answer(plan=made_plan(**changes))
+    paragraphs, references = methods(answer)
+    return " ".join(paragraphs), references
+
+
+@pytest.mark.parametrize("changes", [{}, {"exposure": PLAIN}, {"variance": Variance(propensity="known")}])
+def test_the_references_are_exactly_those_cited(changes):
+    text, references = told(**changes)
+    cited = {
+        key
+        for group in re.findall(r"\(([^()]*\d{4}[^()]*)\)", text)
+        for key in group.split("; ")
+        if key in REFERENCES
+    }
+    assert sorted(REFERENCES[key] for key in cited) == sorted(references)
+    assert len(references) == len(set(references))
+
+
+def test_the_paragraph_follows_the_plan():
+    text, _ = told()
+    for phrase in (
+        "average effect in the population (ATE) of piped in the domain age >= 6 and age <= 14",
+        "logistic regression on urban + C(region) + bs(wealth, df=4)",
+        "maximum pseudo-likelihood under the sampling weights",
+        "capped at their 0.99 quantile",
+        "adjusted Wald F test",
+        "over-identification chi-square test",
+        "PSUs (area) within strata (stratum)",
+        "The influence counts the estimation of the propensity",
+        "Finite population corrections were made at the first stage, from areas",
+        "95% t intervals with 260 degrees of freedom",
+        "adjusted for age",
+        "steelyard 0.1.0",
+    ):
+        assert phrase in text
+
+
+@pytest.mark.parametrize(
+    ("changes", "phrase"),
+    [
+        ({"exposure": replace(PLAIN, link="probit")}, "probit regression"),
+        ({"exposure": replace(PLAIN, weighted=False)}, "without the sampling weights"),
+        ({"exposure": replace(PLAIN, stabilize=True)}, "stabilized by the marginal share"),
+        ({"exposure": replace(PLAIN, propensity_range=(0.05, 0.95))}, "outside 0.05 to 0.95"),
+        ({"exposure": replace(PLAIN, estimand="ATT")}, "the exposed's standard deviation"),
+        ({"design": Design(weight="w")}, "rows, each of which is a PSU of its own, without strata"),
+        ({"design": Design(weight="w", clusters="area")}, "No finite population correction"),
+        ({"variance": Variance(propensity="known")}, "The propensity was treated as known."),
+        ({"variance": Variance(confidence=0.9)}, "90% t intervals"),
+    ],
+)
+def test_each_choice_of_the_plan_has_its_words(changes, phrase):
+    assert phrase in told(**changes)[0]
+
+
+def test_a_lone_psu_is_mentioned_only_where_there_is_one():
+    assert "joined with a neighbouring" not in told(design=Design(weight="w", single_psu="collapse"))[0]
+    answer = made_answer(plan=made_plan(design=Design(weight="w", single_psu="collapse")))
+    strata = answer.checkup.strata.assign(psus=[1, *answer.checkup.strata["psus"][1:]])
+    paragraphs, _ = methods(replace(answer, checkup=replace(answer.checkup, strata=strata)))
+    assert "joined with a neighbouring stratum" in " ".join(paragraphs)
+
+
+def test_a_test_that_was_not_done_is_not_claimed():
+    answer = made_answer()
+    paragraphs, references = methods(
+        replace(answer, balance=replace(answer.balance, over_identification=None))
+    )
+    assert "over-identification" not in " ".join(paragraphs)
+    assert not any("Imai" in reference for reference in references)
+
+
+def test_only_ratios_speak_of_logarithms():
+    text, _ = told(outcome=(Outcome(name="a"), Outcome(name="b"), Outcome(name="c")))
+    assert "made on the logarithm" not in text
