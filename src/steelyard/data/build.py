@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from itertools import pairwise
+from typing import TypeAlias
 
 import numpy as np
 import pyarrow as pa
@@ -23,12 +24,14 @@ from steelyard.data.reading import Chunk, Reader, reader
 from steelyard.data.source import READ_ROWS, Extract
 from steelyard.data.tally import Tally
 from steelyard.data.terms import TermPlan, plan_terms
-from steelyard.data.values import Values, levels_of
+from steelyard.data.values import Values, level_text, levels_of
 from steelyard.errors import ExtractError, FormulaError, PlanError
-from steelyard.plan import Plan
+from steelyard.plan import Plan, Scalar
 
 Floats = NDArray[np.float64]
-Levels = Mapping[str, tuple[str, ...]]
+Levels: TypeAlias = Mapping[str, tuple[str, ...]]
+# The place of a column, and the rows of the extract where it is not a finite number.
+_Unusable: TypeAlias = tuple[int, NDArray[np.int64]]
 
 
 def build_rows(extract: Extract, plan: Plan, engine: Engine, block_rows: int = 8192) -> tuple[Rows, Checkup]:
@@ -59,7 +62,7 @@ def build_rows(extract: Extract, plan: Plan, engine: Engine, block_rows: int = 8
         names=names,
         exposure_model=exposure_model,
         outcome_models=outcome_models,
-        outcomes=tuple(names.index(f"outcome {outcome.name}") for outcome in plan.outcome),
+        outcomes=assembly.outcome_places(),
         terms=tuple(assembly.terms.terms),
         levels=_level_names(plan_reader, tally),
         units=coder.units,
@@ -72,7 +75,8 @@ def build_rows(extract: Extract, plan: Plan, engine: Engine, block_rows: int = 8
 
 def _look(plan_reader: Reader, size: int, engine: Engine) -> tuple[Tally, UnitCoder, Levels]:
     """The first reading: count, collect units and levels."""
-    tally, collector = Tally(plan_reader), UnitCollector(plan_reader.plan.design)
+    plan = plan_reader.plan
+    tally, collector = Tally(plan_reader), UnitCollector(plan.design, plan.data.missing)
     levels: dict[str, set[str]] = {name: set() for name in plan_reader.categories}
     extract = plan_reader.extract
     for start, table in extract.read(plan_reader.columns, size):
@@ -80,7 +84,7 @@ def _look(plan_reader: Reader, size: int, engine: Engine) -> tuple[Tally, UnitCo
         tally.add(chunk)
         collector.add(table, chunk.kept)
         for name, found in levels.items():
-            found |= levels_of(table.column(name), plan_reader.plan.data.missing.get(name, ()))
+            found |= levels_of(table.column(name), plan.data.missing.get(name, ()))
         engine.progress("reading: look", min(start + size, extract.rows), extract.rows)
     tally.refuse_bad_weights()
     return tally, collector.finish(), {name: tuple(sorted(found)) for name, found in levels.items()}
@@ -100,8 +104,14 @@ def _refuse_unusable(plan_reader: Reader, tally: Tally) -> None:
             f"All {tally.domain_weights.count:,} rows of the domain have sampling weight 0.",
             mend="Check design.weight and data.domain.",
         )
-    is_text = plan_reader.extract.columns[exposure] == "category"
-    if plan.exposed is None and is_text:
+    kind = plan_reader.extract.columns[exposure]
+    for key, value in (("exposed", plan.exposed), ("reference", plan.reference)):
+        if isinstance(value, str) and kind != "category":
+            raise PlanError(
+                f'exposure.{key} is the text "{value}", but the exposure "{exposure}" holds {kind}s: {found}.',
+                mend="Write it without quotes.",
+            )
+    if plan.exposed is None and kind == "category":
         raise PlanError(
             f'The exposure "{exposure}" is text: {found}.',
             mend='Say which is which: exposure.exposed = "..." and exposure.reference = "...".',
@@ -134,18 +144,28 @@ def _refuse_unusable(plan_reader: Reader, tally: Tally) -> None:
 
 
 def _level_names(plan_reader: Reader, tally: Tally) -> tuple[str, str]:
+    """Return the exposed and the reference level as the extract spells them."""
     plan = plan_reader.plan.exposure
-    exposed = "1" if plan.exposed is None else str(plan.exposed)
+    is_text = plan_reader.extract.columns[plan_reader.exposure] == "category"
+
+    def text(value: Scalar) -> str:
+        return str(value) if is_text else level_text(float(value))
+
+    if plan.exposed is None:
+        return "1", "0"
+    exposed = text(plan.exposed)
     if plan.reference is not None:
-        return exposed, str(plan.reference)
-    return exposed, next((level for level in tally.levels if level != exposed), "0")
+        return exposed, text(plan.reference)
+    return exposed, next(level for level in tally.levels if level != exposed)
 
 
 def _constant_warnings(plan_reader: Reader, tally: Tally) -> list[str]:
+    constant = {name: f"{low:g}" for name, low in tally.low.items() if low == tally.high[name]}
+    constant |= {name: f'"{next(iter(seen))}"' for name, seen in tally.texts.items() if len(seen) == 1}
     return [
-        f"{name} is {tally.low[name]:g} in every row of the domain: it tells nothing there."
+        f"{name} is {constant[name]} in every row of the domain: it tells nothing there."
         for name in plan_reader.complete
-        if name in tally.low and tally.low[name] == tally.high[name]
+        if name in constant
     ]
 
 
@@ -161,29 +181,59 @@ class _Assembly:
     terms: TermPlan
 
     def columns(self) -> tuple[tuple[str, ...], Model, tuple[Model | None, ...]]:
-        """Return the names of the blocks' columns, the exposure's model, and the outcomes' models."""
-        names = [*self.exposure.names, *self.terms.extra_names, *self._outcome_names()]
+        """Return the names of the blocks' columns, the exposure's model, and the outcomes' models.
+
+        A column that several models share stands once: patsy's name of it says all there is to it, as every
+        formula has learnt from the same rows.
+        """
+        names = [*self.exposure.names, *self.terms.extra_names]
+        names += [f"outcome {name}" for name in self._outcomes()]
+        place = self._places()
         models: list[Model | None] = []
         for builder in self.covariates:
             if builder is None:
                 models.append(None)
                 continue
-            first = len(names)
-            names += builder.names
-            models.append(_model(builder, tuple(range(first, first + len(builder.names)))))
+            for column, name in zip(builder.info.column_names, builder.names, strict=True):
+                if column not in place:
+                    place[column] = len(names)
+                    names.append(name)
+            models.append(_model(builder, tuple(place[column] for column in builder.info.column_names)))
         exposure_model = _model(self.exposure, tuple(range(len(self.exposure.names))))
         return tuple(names), exposure_model, tuple(models)
 
-    def _outcome_names(self) -> list[str]:
-        return list(dict.fromkeys(f"outcome {outcome.name}" for outcome in self.plan_reader.plan.outcome))
+    def _places(self) -> dict[str, int]:
+        """Return where outcome models find columns that stand there anyway, by patsy's names of them."""
+        first = len(self.exposure.names)
+        # A plain word names a column of the extract here as in patsy; an odd name might mean something else.
+        extra = {name: first + k for k, name in enumerate(self.terms.extra_names) if name.isidentifier()}
+        return {**extra, **{column: k for k, column in enumerate(self.exposure.info.column_names)}}
+
+    def outcome_places(self) -> tuple[int, ...]:
+        """Return, for each outcome of the plan, the place of its column."""
+        first = len(self.exposure.names) + len(self.terms.extra_names)
+        place = {name: first + k for k, name in enumerate(self._outcomes())}
+        return tuple(place[outcome.name] for outcome in self.plan_reader.plan.outcome)
+
+    def _outcomes(self) -> tuple[str, ...]:
+        return tuple(dict.fromkeys(outcome.name for outcome in self.plan_reader.plan.outcome))
 
     def build(self, values: Mapping[str, Values], n: int) -> Floats:
         """Return the (n, C) columns of complete rows."""
-        outcomes = dict.fromkeys(outcome.name for outcome in self.plan_reader.plan.outcome)
         parts = [self.exposure.build(values, n), self.terms.extra(values, n)]
-        parts += [np.asarray(values[name], dtype=np.float64)[:, np.newaxis] for name in outcomes]
-        parts += [builder.build(values, n) for builder in self.covariates if builder is not None]
+        parts += [np.asarray(values[name], dtype=np.float64)[:, np.newaxis] for name in self._outcomes()]
+        parts += [builder.build(values, n)[:, own] for builder, own in self._own_columns()]
         return np.concatenate(parts, axis=1)
+
+    def _own_columns(self) -> Iterator[tuple[DesignBuilder, list[int]]]:
+        """Give the outcome models that bring columns no model before them has, and which those are."""
+        known = set(self._places())
+        for builder in self.covariates:
+            if builder is not None:
+                own = [k for k, column in enumerate(builder.info.column_names) if column not in known]
+                known.update(builder.info.column_names)
+                if own:
+                    yield builder, own
 
 
 def _model(builder: DesignBuilder, index: tuple[int, ...]) -> Model:
@@ -221,19 +271,20 @@ def _blocks(
     plan_reader: Reader, assembly: _Assembly, block_rows: int, size: int, engine: Engine
 ) -> list[Block]:
     """The second reading: build the design rows, chunk by chunk, and cut them into blocks."""
-    names = assembly.columns()[0]
 
-    def build(run: tuple[int, pa.Table]) -> list[Block]:
+    def build(run: tuple[int, pa.Table]) -> tuple[list[Block], list[_Unusable]]:
         start, table = run
         chunk = plan_reader.chunk(start, table, assembly.levels)
         kept = np.flatnonzero(chunk.kept)
         if not len(kept):
-            return []
+            return [], []
         columns = assembly.build(_kept(chunk), len(kept))
-        _refuse_unfinished(columns, names, start + kept)
+        unusable = _unusable(columns, start + kept)
+        if unusable:
+            return [], unusable
         unit = assembly.coder.encode(table)
         cuts = np.searchsorted(kept, np.arange(0, table.num_rows + block_rows, block_rows))
-        return [
+        blocks = [
             Block(
                 position=(start + kept[a:b]).astype(np.int64),
                 columns=columns[a:b] if b - a == len(kept) else columns[a:b].copy(),
@@ -244,24 +295,31 @@ def _blocks(
             for a, b in pairwise(cuts)
             if b > a
         ]
+        return blocks, []
 
     runs = plan_reader.extract.read(plan_reader.columns, size)
     count = -(-plan_reader.extract.rows // size)
     # Formulas that have learnt something cannot travel to another process.
-    blocks = engine.local().run("reading: build", runs, build, total=count)
+    blocks, unusable = engine.local().run("reading: build", runs, build, total=count)
+    _refuse_unusable_values(unusable, assembly.columns()[0])
     # What Arrow keeps for reading more is better used by the estimates.
     pa.default_memory_pool().release_unused()
     return blocks
 
 
-def _refuse_unfinished(columns: Floats, names: tuple[str, ...], position: NDArray[np.int64]) -> None:
-    if np.isfinite(columns).all():
+def _unusable(columns: Floats, position: NDArray[np.int64]) -> list[_Unusable]:
+    """Return each column that is not finite somewhere, with the rows of the extract where it is not."""
+    bad = ~np.isfinite(columns)
+    return [(int(place), position[bad[:, place]]) for place in np.flatnonzero(bad.any(axis=0))]
+
+
+def _refuse_unusable_values(unusable: list[_Unusable], names: tuple[str, ...]) -> None:
+    if not unusable:
         return
-    rows, places = np.nonzero(~np.isfinite(columns))
-    place = int(places[0])
-    where = position[rows[places == place]]
+    first = min(place for place, _ in unusable)
+    where = np.concatenate([rows for place, rows in unusable if place == first])
     raise FormulaError(
-        f'The design column "{names[place]}" is not a finite number in {len(where):,} or more rows, first in '
+        f'The design column "{names[first]}" is not a finite number in {len(where):,} row(s), first in '
         f"row(s) {', '.join(map(str, where[:5]))} (counted from 0).",
         mend="Look at the values there, such as the logarithm of 0: recode them, or name codes in "
         "data.missing.",

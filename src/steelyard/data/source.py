@@ -17,10 +17,12 @@ import pyarrow as pa
 import pyarrow.dataset as ds
 import pyarrow.parquet as pq
 
+from steelyard.data.files import find_files
 from steelyard.errors import ExtractError
 
 READ_ROWS = 16_384
-GLOB_SIGNS = frozenset("*?[")
+# A file may be one row group of a million rows: its columns are decoded in pieces of this many bytes.
+READ_BYTES = 65_536
 
 
 @dataclass(frozen=True)
@@ -32,6 +34,13 @@ class Part:
     schema: pa.Schema
     rows: int
     batches: Callable[[list[str], int], Iterator[pa.RecordBatch]]
+
+    @property
+    def told(self) -> str:
+        """The part as a message names it."""
+        if self.path:
+            return self.name
+        return "the dataset" if self.name == "dataset" else "the extract in memory"
 
 
 @dataclass(frozen=True)
@@ -56,16 +65,22 @@ class Extract:
         Raises
         ------
         ExtractError
-            Naming the column, the file where it is missing, and the nearest existing name.
+            Naming the column, the file where it is missing or stands twice, and the nearest existing name.
         """
         for name in names:
             for part in self.parts:
-                if name in part.schema.names:
+                count = part.schema.names.count(name)
+                if count > 1:
+                    raise ExtractError(
+                        f'Column "{name}" stands {count} times in {part.told}.',
+                        mend="Rename or drop all but one.",
+                    )
+                if count:
                     continue
                 near = get_close_matches(name, part.schema.names, n=1, cutoff=0.6)
                 hint = f'Did you mean "{near[0]}"?' if near else f"It has {_some(part.schema.names)}."
                 raise ExtractError(
-                    f'The {what} names column "{name}", which {part.name} does not have.', mend=hint
+                    f'The {what} names column "{name}", which {part.told} does not have.', mend=hint
                 )
 
     def read(self, columns: Sequence[str], size: int = READ_ROWS) -> Iterator[tuple[int, pa.Table]]:
@@ -74,14 +89,16 @@ class Extract:
         Raises
         ------
         ExtractError
-            A file is cut short, damaged or gone, or has changed since it was opened.
+            A column is not in every file, a file is cut short, damaged or gone, or has changed since it was
+            opened, or its numbers do not fit the type they have in the other files.
         """
         names = list(dict.fromkeys(columns))
+        self.require(names)
         types = [self._type(name) for name in names]
         start, held, count = 0, [], 0
         for part in self.parts:
             for batch in _guarded(part, names, size):
-                held.append(_plain(batch, types))
+                held.append(_plain(part.told, batch, types))
                 count += batch.num_rows
                 while count >= size:
                     table = pa.Table.from_batches(held)
@@ -114,8 +131,10 @@ class Extract:
                     size = part.path.stat().st_size
                     with part.path.open("rb") as file:
                         digest = hashlib.file_digest(file, "sha256").hexdigest()
-                except OSError as error:
-                    raise _gone(part.name, error) from None
+                except PermissionError:
+                    raise _forbidden(part.name) from None
+                except OSError:
+                    raise _gone(part.name) from None
             records.append({"file": part.name, "rows": part.rows, "bytes": size, "sha256": digest})
         return pd.DataFrame.from_records(records).astype({"bytes": "Int64"})
 
@@ -132,8 +151,8 @@ def open_extract(extract: Any, folder: Path | None = None) -> Extract:
     Raises
     ------
     ExtractError
-        No file matches, a file is not Parquet or is cut short, files disagree about the kind of a
-        column, or there are no rows.
+        No file matches, a file is named twice, is not Parquet or is cut short, files disagree about the kind
+        of a column, or there are no rows.
     """
     if isinstance(extract, pd.DataFrame):
         parts: tuple[Part, ...] = (_table_part(_from_pandas(extract)),)
@@ -142,7 +161,7 @@ def open_extract(extract: Any, folder: Path | None = None) -> Extract:
     elif isinstance(extract, ds.Dataset):
         parts = (_dataset_part(extract),)
     elif isinstance(extract, str | Path | list | tuple):
-        parts = tuple(_file_part(name, path) for name, path in _files(extract, folder or Path()))
+        parts = tuple(_file_part(name, path) for name, path in find_files(extract, folder or Path()))
     else:
         raise ExtractError(
             f"An extract cannot be a {type(extract).__name__}.",
@@ -189,68 +208,40 @@ def _kinds(parts: tuple[Part, ...]) -> dict[str, str]:
     return {name: "number" if kind == "empty" else kind for name, (kind, _, _) in kinds.items()}
 
 
-def _files(extract: str | Path | Sequence[str | Path], folder: Path) -> list[tuple[str, Path]]:
-    names = [extract] if isinstance(extract, str | Path) else list(extract)
-    found: list[tuple[str, Path]] = []
-    for name in names:
-        path = folder / name
-        if path.is_dir():
-            some = [
-                p
-                for p in sorted(path.rglob("*"))
-                if p.is_file() and not any(q[0] in "._" for q in p.relative_to(path).parts)
-            ]
-        elif path.exists() or not GLOB_SIGNS & set(str(name)):
-            some = [path]
-        else:
-            relative = Path(name)
-            base = Path(relative.anchor) if relative.is_absolute() else folder
-            pattern = str(relative.relative_to(relative.anchor)) if relative.is_absolute() else str(relative)
-            some = sorted(p for p in base.glob(pattern) if p.is_file() and p.name[0] not in "._")
-        if not some:
-            raise ExtractError(
-                f'No file matches "{name}".',
-                mend="Check the name; relative names start at the plan's folder.",
-            )
-        found += [(_display(p, folder), p) for p in some]
-    if not found:
-        raise ExtractError("No file is named.", mend="Set data.files.")
-    return found
-
-
-def _display(path: Path, folder: Path) -> str:
-    """Return the name to show: below the plan's folder where it lies there, else the bare file name."""
-    try:
-        return path.resolve().relative_to(folder.resolve()).as_posix()
-    except ValueError:
-        return path.name
-
-
 def _file_part(name: str, path: Path) -> Part:
     try:
+        stamp = _stamp(path)
         with _opened(path) as file:
             schema, rows = file.schema_arrow, file.metadata.num_rows
     except FileNotFoundError:
         raise ExtractError(
             f'There is no file "{name}".', mend="Check data.files; relative names start at the plan's folder."
         ) from None
+    except PermissionError:
+        raise _forbidden(name) from None
     except (pa.ArrowException, OSError) as error:
         raise _damaged(name, error) from None
 
     def batches(columns: list[str], size: int) -> Iterator[pa.RecordBatch]:
+        if _stamp(path) != stamp:
+            raise ExtractError(
+                f"{name} has changed since it was opened.", mend="Run again when nobody writes to it."
+            )
         with _opened(path) as file:
-            if file.metadata.num_rows != rows or not file.schema_arrow.equals(schema):
-                raise ExtractError(
-                    f"{name} has changed since it was opened.", mend="Run again when nobody writes to it."
-                )
             yield from file.iter_batches(batch_size=size, columns=columns)
 
     return Part(name, path, schema, rows, batches)
 
 
 def _opened(path: Path) -> pq.ParquetFile:
-    """Open a file to be read one row group at a time, whose pages are checked where they carry checksums."""
-    return pq.ParquetFile(path, pre_buffer=False, page_checksum_verification=True)
+    """Open a file to be read piece by piece, whose pages are checked where they carry checksums."""
+    return pq.ParquetFile(path, pre_buffer=False, buffer_size=READ_BYTES, page_checksum_verification=True)
+
+
+def _stamp(path: Path) -> tuple[int, int]:
+    """Return the size in bytes of a file and when it was last written, in nanoseconds."""
+    status = path.stat()
+    return status.st_size, status.st_mtime_ns
 
 
 def _table_part(table: pa.Table) -> Part:
@@ -277,7 +268,8 @@ def _from_pandas(frame: pd.DataFrame) -> pa.Table:
         return pa.Table.from_pandas(frame.rename(columns=str), preserve_index=False)
     except pa.ArrowException as error:
         raise ExtractError(
-            f"The frame cannot be read: {error}.", mend="Give every column values of one type."
+            f"The frame cannot be read: {'; '.join(map(str, error.args))}.",
+            mend="Give every column values of one type.",
         ) from None
 
 
@@ -288,8 +280,10 @@ def _guarded(part: Part, names: list[str], size: int) -> Iterator[pa.RecordBatch
         for batch in part.batches(names, size):
             rows += batch.num_rows
             yield batch
-    except FileNotFoundError as error:
-        raise _gone(part.name, error) from None
+    except FileNotFoundError:
+        raise _gone(part.name) from None
+    except PermissionError:
+        raise _forbidden(part.name) from None
     except (pa.ArrowException, OSError) as error:
         raise _damaged(part.name, error) from None
     if rows != part.rows:
@@ -298,39 +292,55 @@ def _guarded(part: Part, names: list[str], size: int) -> Iterator[pa.RecordBatch
         )
 
 
-def _plain(batch: pa.RecordBatch, types: list[pa.DataType | None]) -> pa.RecordBatch:
+def _plain(part: str, batch: pa.RecordBatch, types: Sequence[pa.DataType | None]) -> pa.RecordBatch:
     """Return the batch with each column in the type it has in all parts."""
     columns = []
-    for column, kind in zip(batch.columns, types, strict=True):
-        if kind is None or column.type == kind:
-            columns.append(column)
-        elif pa.types.is_dictionary(kind) and not pa.types.is_dictionary(column.type):
-            columns.append(column.cast(pa.string()).dictionary_encode())
-        elif pa.types.is_dictionary(column.type) and not pa.types.is_dictionary(kind):
-            columns.append(column.dictionary_decode().cast(kind))
-        else:
-            columns.append(column.cast(kind))
+    for name, column, kind in zip(batch.schema.names, batch.columns, types, strict=True):
+        try:
+            columns.append(_cast(column, kind))
+        except pa.ArrowInvalid:
+            raise ExtractError(
+                f'Column "{name}" of {part} is {column.type} and holds a number that {kind} cannot hold exactly.',
+                mend="Write it as text if it is an id, as double if it is an amount, and alike in all files.",
+            ) from None
     return pa.RecordBatch.from_arrays(columns, names=batch.schema.names)
+
+
+def _cast(column: pa.Array, kind: pa.DataType | None) -> pa.Array:
+    if kind is None or column.type == kind:
+        return column
+    if pa.types.is_dictionary(kind) and not pa.types.is_dictionary(column.type):
+        return column.cast(pa.string()).dictionary_encode()
+    if pa.types.is_dictionary(column.type) and not pa.types.is_dictionary(kind):
+        return column.dictionary_decode().cast(kind)
+    return column.cast(kind)
 
 
 def _is_whole(kind: pa.DataType) -> bool:
     if pa.types.is_dictionary(kind):
         return _is_whole(kind.value_type)
     return bool(
-        pa.types.is_integer(kind)
-        or pa.types.is_null(kind)
-        or (pa.types.is_decimal(kind) and kind.scale == 0 and kind.precision <= 18)
+        pa.types.is_integer(kind) or pa.types.is_null(kind) or (pa.types.is_decimal(kind) and kind.scale == 0)
     )
 
 
-def _gone(name: str, error: Exception) -> ExtractError:
-    return ExtractError(f"{name} cannot be read any more: {error}.", mend="Put the file back and run again.")
+def _gone(name: str) -> ExtractError:
+    return ExtractError(
+        f"{name} cannot be read any more: it was there when the extract was opened and is gone.",
+        mend="Put the file back and run again.",
+    )
+
+
+def _forbidden(name: str) -> ExtractError:
+    return ExtractError(
+        f"{name} may not be read by this user.", mend="Ask its owner for the right to read it."
+    )
 
 
 def _damaged(name: str, error: Exception) -> ExtractError:
     return ExtractError(
         f"{name} is not a whole Parquet file: {str(error).splitlines()[0].rstrip('.')}.",
-        mend="Copy or write it again; it may have been cut short.",
+        mend="Copy or write it again, as it may have been cut short; leave it out if it never was Parquet.",
     )
 
 

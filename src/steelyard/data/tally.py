@@ -6,10 +6,11 @@ from collections import Counter
 from dataclasses import dataclass, field
 
 import numpy as np
+import pandas as pd
 from numpy.typing import NDArray
 
 from steelyard.data.reading import Chunk, Reader, exposure_counts
-from steelyard.data.values import is_missing
+from steelyard.data.values import Values, is_missing
 from steelyard.errors import DesignError
 
 Floats = NDArray[np.float64]
@@ -33,7 +34,8 @@ class WeightSums:
         if len(weight):
             self.count += len(weight)
             self.total += float(weight.sum())
-            self.squares += float(weight @ weight)
+            # Not a dot product: BLAS would wake its threads for it, run after run.
+            self.squares += float(np.square(weight).sum())
             self.low = min(self.low, float(weight.min()))
             self.high = max(self.high, float(weight.max()))
 
@@ -55,6 +57,8 @@ class Tally:
         Outcome and family -> rows of the domain with a value that the family does not have.
     low, high : mapping
         Column -> smallest and largest number in the domain.
+    texts : mapping
+        Category column -> levels met in the domain; no more are looked for once there are two.
     beyond : columns with a number other than 0 and 1 in the domain
     """
 
@@ -70,6 +74,7 @@ class Tally:
     bad_values: Counter[tuple[str, str]] = field(default_factory=Counter)
     low: dict[str, float] = field(default_factory=dict)
     high: dict[str, float] = field(default_factory=dict)
+    texts: dict[str, set[str]] = field(default_factory=dict)
     beyond: set[str] = field(default_factory=set)
     bad_weights: int = 0
     bad_positions: list[int] = field(default_factory=list)
@@ -129,11 +134,17 @@ class Tally:
                 self.bad_values[name, family] += int(((values != 0) & (values != 1)).sum())
             elif family == "poisson":
                 self.bad_values[name, family] += int((values < 0).sum())
-        for name in self.reader.complete:
-            column = chunk.values[name]
-            if isinstance(column, np.ndarray) and chunk.kept.any():
-                values = column[chunk.kept]
-                self.low[name] = min(self.low.get(name, np.inf), float(values.min()))
-                self.high[name] = max(self.high.get(name, -np.inf), float(values.max()))
-                if name not in self.beyond and not np.all((values == 0) | (values == 1)):
-                    self.beyond.add(name)
+        if chunk.kept.any():
+            for name in self.reader.complete:
+                self._range(name, chunk.values[name][chunk.kept])
+
+    def _range(self, name: str, values: Values) -> None:
+        if isinstance(values, pd.Categorical):
+            seen = self.texts.setdefault(name, set())
+            if len(seen) < 2:
+                seen.update(values.categories[np.unique(values.codes)])
+            return
+        self.low[name] = min(self.low.get(name, np.inf), float(values.min()))
+        self.high[name] = max(self.high.get(name, -np.inf), float(values.max()))
+        if name not in self.beyond and not np.all((values == 0) | (values == 1)):
+            self.beyond.add(name)

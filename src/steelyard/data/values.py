@@ -56,7 +56,8 @@ def values_of(
     kind = column.type
     if pa.types.is_dictionary(kind):
         return _category(column, frozenset(map(str, codes)), levels)
-    numbers = np.array(column.cast(pa.float64()).to_numpy(), dtype=np.float64)
+    # Whole numbers beyond 2^53 are rounded, as any other number is.
+    numbers = np.array(column.cast(pa.float64(), safe=False).to_numpy(), dtype=np.float64)
     for code in codes:
         numbers[numbers == float(code)] = np.nan
     return numbers
