@@ -22,6 +22,7 @@ Floats = NDArray[np.float64]
 # A cache line of a row holds eight columns: gathering eight reads the rows no more often than one.
 COLUMNS_GATHERED = 8
 BINS = 65_536
+RUN = 65_536
 # Shares of weight below this are rounding: a bin that could beat an edge by less is left alone.
 ROUNDING = 1e-13
 
@@ -56,7 +57,7 @@ class Distance:
     def __init__(self, exposure: Floats, weights: tuple[Floats, ...], bins: int = BINS) -> None:
         self._bins = bins
         # Exposed rows fill the first half of the bins, reference rows the second: one count for both.
-        self._half = np.where(exposure == 1, 0, bins)
+        self._half = np.where(exposure == 1, 0, bins).astype(np.int32)
         self._shares = tuple(
             weight / np.where(exposure == 1, weight[exposure == 1].sum(), weight[exposure == 0].sum())
             for weight in weights
@@ -67,21 +68,43 @@ class Distance:
         low, width = values.min(), np.ptp(values)
         if not width > 0:
             return (0.0,) * len(self._shares)
-        # Rounding may move an edge, but never orders two values against their bins.
-        scaled = values - low
-        scaled *= self._bins / width
-        place = np.minimum(scaled, self._bins - 1, out=scaled).astype(np.int64)
-        place += self._half
-        return tuple(self._largest(values, place, share) for share in self._shares)
+        place = self._places(values, low, self._bins / width)
+        one_value_a_bin = self._discrete(values, place)
+        return tuple(self._largest(values, place, share, one_value_a_bin) for share in self._shares)
 
-    def _largest(self, values: Floats, place: NDArray[np.int64], share: Floats) -> float:
-        exposed, reference = np.bincount(place, share, 2 * self._bins).reshape(2, -1)
+    def _places(self, values: Floats, low: float, scale: float) -> NDArray[np.int32]:
+        """Return the bin of each row, in its group's half; (n,). Equal values share a bin, larger ones follow."""
+        place = np.empty(len(values), dtype=np.int32)
+        for run in _runs(len(values)):
+            scaled = values[run] - low
+            scaled *= scale
+            place[run] = np.minimum(scaled, self._bins - 1, out=scaled)
+            place[run] += self._half[run]
+        return place
+
+    def _discrete(self, values: Floats, place: NDArray[np.int32]) -> bool:
+        """Whether every bin holds one value, so that the gap changes at edges alone."""
+        value = np.zeros(self._bins)
+        for run in _runs(len(values)):
+            value[place[run] % self._bins] = values[run]
+        return all(np.array_equal(value[place[run] % self._bins], values[run]) for run in _runs(len(values)))
+
+    def _largest(
+        self, values: Floats, place: NDArray[np.int32], share: Floats, one_value_a_bin: bool
+    ) -> float:
+        binned = np.zeros(2 * self._bins)
+        for run in _runs(len(values)):
+            binned += np.bincount(place[run], share[run], 2 * self._bins)
+        exposed, reference = binned.reshape(2, -1)
         rise = exposed - reference
         right = np.cumsum(rise)
         left = right - rise
         best = float(np.abs(right).max())
+        if one_value_a_bin:
+            return best
         open_bins = np.maximum(np.abs(left + exposed), np.abs(left - reference)) > best + ROUNDING
-        rows = np.flatnonzero(np.concatenate([open_bins, open_bins])[place])
+        either = np.concatenate([open_bins, open_bins])
+        rows = np.concatenate([run.start + np.flatnonzero(either[place[run]]) for run in _runs(len(values))])
         if not len(rows):
             return best
         rows = rows[np.argsort(values[rows])]
@@ -94,6 +117,11 @@ class Distance:
         gap += np.repeat(offset, np.diff(np.append(starts, len(gap))))
         last_of_ties = np.append(inside[1:] != inside[:-1], True)
         return max(best, float(np.abs(gap[last_of_ties]).max()))
+
+
+def _runs(count: int) -> list[slice]:
+    """Return runs of rows short enough that what is computed on them stays out of fresh memory pages."""
+    return [slice(first, min(first + RUN, count)) for first in range(0, count, RUN)]
 
 
 def _distance(before: Floats, after: Floats, exposure: Floats) -> Distance:
