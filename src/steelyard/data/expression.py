@@ -17,7 +17,7 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from steelyard.data.guard import QUOTED, without_quotes
+from steelyard.data.guard import QUOTED, quoted_column, without_quotes
 from steelyard.errors import FormulaError
 
 Bools = NDArray[np.bool_]
@@ -366,14 +366,4 @@ def _column(node: ast.AST) -> str | None:
     """Return the column a node names: a bare name, or ``Q("odd name")``."""
     if isinstance(node, ast.Name):
         return node.id
-    if (
-        isinstance(node, ast.Call)
-        and isinstance(node.func, ast.Name)
-        and node.func.id == "Q"
-        and len(node.args) == 1
-        and not node.keywords
-        and isinstance(node.args[0], ast.Constant)
-        and isinstance(node.args[0].value, str)
-    ):
-        return node.args[0].value
-    return None
+    return quoted_column(node)

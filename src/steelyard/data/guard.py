@@ -57,7 +57,7 @@ def bare_column(code: str) -> str | None:
     node = ast.parse(code, mode="eval").body
     if isinstance(node, ast.Name):
         return node.id
-    return _quoted(node)
+    return quoted_column(node)
 
 
 def without_quotes(text: str) -> str:
@@ -216,7 +216,7 @@ class _Check:
         return value is None or (isinstance(value, int) and 0 <= value <= LARGEST_BASIS)
 
     def _quoted_name(self, node: ast.Call) -> str:
-        name = _quoted(node)
+        name = quoted_column(node)
         if name is None:
             raise FormulaError(
                 f'"{self._snippet(node)}" does not name a column.', mend='Write it as Q("odd name").'
@@ -335,7 +335,7 @@ class _Check:
         return text if len(text) <= 60 else text[:57] + "..."
 
 
-def _quoted(node: ast.expr) -> str | None:
+def quoted_column(node: ast.AST) -> str | None:
     """Return the column of ``Q("odd name")``, or None for anything else."""
     if (
         isinstance(node, ast.Call)

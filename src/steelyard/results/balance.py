@@ -8,6 +8,7 @@ from numpy.typing import NDArray
 
 from steelyard.balance.columns import TermColumns
 from steelyard.balance.moments import TermMoments
+from steelyard.design.linearization import standard_errors
 from steelyard.estimate.moments import EXPOSED, REFERENCE, Moments
 from steelyard.results.answer import BalanceResults
 from steelyard.results.estimates import chi_square, t_p_values, wald_f
@@ -49,7 +50,7 @@ def balance_of(
         ("after", moments.after, distances[1]),
     ):
         values, covariance = inference.of(when)
-        se = np.sqrt(np.maximum(np.diag(covariance), 0))
+        se = standard_errors(covariance)
         exact = ~(se > EXACT * spread)
         statistic = np.divide(values, se, out=np.full_like(values, np.nan), where=~exact)
         table[f"mean_exposed_{when}"] = of_group.mean[EXPOSED]

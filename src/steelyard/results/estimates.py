@@ -14,6 +14,7 @@ from scipy import stats
 from statsmodels.base.model import LikelihoodModelResults
 from statsmodels.iolib.summary2 import Summary
 
+from steelyard.design.linearization import standard_errors
 from steelyard.estimate.linear import quadratic_form
 
 Floats = NDArray[np.float64]
@@ -99,9 +100,7 @@ class EstimateResults:
         self.df_resid = float(df)
         self._covariance = np.asarray(covariance, dtype=np.float64)
         self.params = pd.Series(params, index=list(names), name="estimate", dtype=np.float64)
-        self.bse = pd.Series(
-            np.sqrt(np.maximum(np.diag(self._covariance), 0)), index=list(names), name="std_error"
-        )
+        self.bse = pd.Series(standard_errors(self._covariance), index=list(names), name="std_error")
         self.table = self._default_table(confidence) if table is None else table
 
     @property
