@@ -100,8 +100,15 @@ class ColumnsOfWeights:
     def __init__(self, columns):
         self.columns = np.asarray(columns, dtype=np.float64)
 
+    @property
+    def count(self):
+        return self.columns.shape[1]
+
     def __call__(self, block):
         return self.columns[block.position]
+
+    def only(self, columns):
+        return ColumnsOfWeights(self.columns[:, list(columns)])
 
 
 def survey_sample(seed=0, n=500, p=4, psus=40, strata=5):

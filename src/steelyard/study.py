@@ -10,7 +10,7 @@ import warnings as python_warnings
 from collections.abc import Iterator, Mapping
 from concurrent.futures import Executor
 from contextlib import contextmanager
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from functools import partial
 from importlib.metadata import version
 from pathlib import Path
@@ -19,7 +19,6 @@ from typing import Any
 import numpy as np
 
 from steelyard.balance.columns import TermColumns
-from steelyard.balance.conditions import moment_conditions
 from steelyard.balance.distributions import distances
 from steelyard.balance.moments import term_moments
 from steelyard.data.blocks import Rows
@@ -29,20 +28,17 @@ from steelyard.data.passes import Engine, Progress, silent, threads
 from steelyard.data.source import Extract, open_extract
 from steelyard.design.survey import SurveyDesign, survey_design
 from steelyard.errors import PlanError, SteelyardWarning
-from steelyard.estimate.estimates import Estimates
 from steelyard.estimate.fit import Fit
 from steelyard.estimate.moments import Moments, MomentsKernel, merge_moments
 from steelyard.estimate.weights import FullSample, SamplingWeights
-from steelyard.exposure.balancing import Balancing
-from steelyard.exposure.group_means import group_means
-from steelyard.exposure.propensity import balancing, coefficients, fit_propensity
-from steelyard.outcome.contrasts import OutcomeColumns, contrast
-from steelyard.outcome.effects import Effects, effects
+from steelyard.exposure.propensity import balancing, fit_propensity
+from steelyard.outcome.contrasts import OutcomeColumns
 from steelyard.plan import Plan, plan_keys, read_plan
 from steelyard.results.answer import Answer
 from steelyard.results.balance import balance_of, balance_warnings
 from steelyard.results.effects import effect_results, sensitivity_of
 from steelyard.results.estimates import EstimateResults
+from steelyard.results.groups import groups
 from steelyard.results.inference import Inference, linearized
 from steelyard.results.overlap import overlap_of, overlap_warnings
 from steelyard.results.weights_file import weight_batches
@@ -122,23 +118,18 @@ class Study(Plan):
                 overlap = overlap_of(rows, self.exposure, made, engine)
             with watch("balance"):
                 moments = term_moments(columns, made, engine, blocks)
-                of_terms = partial(group_means, columns.labels, columns)
-                before = of_terms("sampling", made, engine, blocks).differences()
-                after = of_terms("combined", made, engine, blocks).differences()
-                conditions = moment_conditions(made, engine, blocks)
                 apart = distances(columns, made, engine, blocks)
             with watch("effects"):
-                found = effects(rows, self.outcome, made, engine)
+                found = groups(rows, self, made, engine)
                 outcomes = _outcome_moments(rows, engine)
             with watch("variance"):
-                groups = _groups(self, made, before, after, conditions, found)
-                inference = linearized(groups, made, design, rows, engine)
+                inference = linearized(found.with_weights_known(), made, design, rows, engine)
         balance = balance_of(columns, moments, apart, inference, self.exposure.estimand, design.df)
         known = self.variance.propensity == "known"
         as_asked = partial(
             effect_results,
             self,
-            found,
+            found.effects,
             design=design,
             rows=len(rows),
             outcomes=outcomes,
@@ -199,44 +190,6 @@ def _engine(
         return
     with threads(workers, progress) as engine:
         yield engine
-
-
-def _groups(
-    plan: Plan,
-    made: Balancing,
-    before: Estimates,
-    after: Estimates,
-    conditions: Estimates | None,
-    found: Effects,
-) -> dict[str, Estimates]:
-    """Return everything whose covariance is wanted, by name; one pass gives it all."""
-    groups = {
-        "propensity": coefficients(made),
-        "before": before,
-        "after": after,
-    }
-    for place, effect in enumerate(found.estimates):
-        groups[f"effect {place}"] = effect
-        groups[f"effect {place}, propensity known"] = effect.with_weights_known()
-    if conditions is not None:
-        groups["conditions"] = conditions
-    for place in _ratio_places(plan, found):
-        outcome = replace(plan.outcome[place], measure="ratio")
-        groups[f"ratio {place}"] = contrast(outcome, place, outcome.name, found.means)
-    return groups
-
-
-def _ratio_places(plan: Plan, found: Effects) -> list[int]:
-    """Return the outcomes whose difference has a risk ratio beside it that needs no approximation."""
-    means = found.means.means[:, :, 0]
-    return [
-        place
-        for place, outcome in enumerate(plan.outcome)
-        if outcome.measure == "difference"
-        and outcome.family != "gaussian"
-        and not outcome.covariates
-        and np.all(means[:, place] > 0)
-    ]
 
 
 def _ratios(plan: Plan, inference: Inference) -> dict[int, tuple[float, float]]:

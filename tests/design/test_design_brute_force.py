@@ -15,9 +15,9 @@ from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 
 from steelyard.data.passes import Engine
+from steelyard.data.unit_totals import LONG_RUN
 from steelyard.design import linearization
 from steelyard.design.linearization import (
-    LONG_RUN,
     PlainInfluence,
     _TotalsKernel,
     covariance,

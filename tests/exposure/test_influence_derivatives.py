@@ -9,11 +9,12 @@ import pytest
 
 from made import ColumnsOfWeights, made_rows, survey_sample
 from steelyard.balance.columns import TermColumns
-from steelyard.balance.conditions import moment_conditions
+from steelyard.balance.conditions import ConditionsKernel, conditions_of, has_conditions
 from steelyard.data.passes import Engine
 from steelyard.estimate.estimates import Estimates
 from steelyard.exposure.group_means import group_means
 from steelyard.exposure.influence import joint_influence
+from steelyard.exposure.one_pass import sums_in_one_pass
 from steelyard.exposure.propensity import balancing, coefficients, fit_propensity
 from steelyard.outcome.effects import effects
 from steelyard.plan import Exposure, Outcome
@@ -122,10 +123,11 @@ def test_effects_of_every_family_and_measure(balanced):
 
 def test_moment_conditions(balanced):
     rows, _, made = balanced
-    conditions = moment_conditions(made, ENGINE, rows.blocks)
-    if conditions is None:
+    if not has_conditions(made):
         assert made.estimand == "ATO"
         return
+    sums = sums_in_one_pass("conditions", {"c": ConditionsKernel()}, made, ENGINE, rows.blocks)
+    conditions = conditions_of(made, sums["c"])
     influence = influence_of(conditions, made, rows)
     moved = (conditions.values[:, 1::2] - conditions.values[:, 2::2]) / (2 * STEP)
     expected = (S[:, None] * influence)[PROBED].T

@@ -2,24 +2,27 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
-from steelyard.data.blocks import Block
-from steelyard.data.passes import Engine
-from steelyard.estimate.estimates import Estimates, Product
+from steelyard.data.unit_totals import Product
+from steelyard.estimate.estimates import Estimates
 from steelyard.exposure.balancing import BalancedRows, Balancing
 
 Floats = NDArray[np.float64]
 
 
-def moment_conditions(balancing: Balancing, engine: Engine, blocks: Sequence[Block]) -> Estimates | None:
+def has_conditions(balancing: Balancing) -> bool:
+    """Whether maximum likelihood has left conditions to test: not so for the ATO with a logit."""
+    return not (balancing.estimand == "ATO" and balancing.fit.regression.likelihood.link == "logit")
+
+
+def conditions_of(balancing: Balancing, sums: Floats) -> Estimates:
     """Return the balancing moments of the exposure model's columns, which are zero for a right model.
 
-    None where maximum likelihood has set them to zero already: the ATO with a logit.
+    ``sums`` (p, K) are those of :class:`ConditionsKernel` over all rows.
 
     Notes
     -----
@@ -28,11 +31,7 @@ def moment_conditions(balancing: Balancing, engine: Engine, blocks: Sequence[Blo
     restrictions of Imai & Ratkovic (2014, section 2.3) are these; their influence includes the estimation
     of the coefficients.
     """
-    regression = balancing.fit.regression
-    if balancing.estimand == "ATO" and regression.likelihood.link == "logit":
-        return None
-    values = engine.run("balance: moment conditions", blocks, _ConditionsKernel(balancing))
-    return Estimates(regression.names, values, signed_columns, np.eye(len(values)), "pure")
+    return Estimates(balancing.fit.regression.names, sums, signed_columns, np.eye(len(sums)), "pure")
 
 
 def signed_columns(rows: BalancedRows) -> list[Product]:
@@ -41,10 +40,10 @@ def signed_columns(rows: BalancedRows) -> list[Product]:
 
 
 @dataclass(frozen=True)
-class _ConditionsKernel:
-    balancing: Balancing
+class ConditionsKernel:
+    """From balanced rows to the moments of the exposure model's columns, (p, K)."""
 
-    def __call__(self, block: Block) -> Floats:
-        rows = self.balancing.rows(block)
+    def __call__(self, rows: BalancedRows) -> Floats:
+        """Return the sums of the rows."""
         sign = np.where(rows.exposed, 1.0, -1.0)
         return np.asarray(rows.columns.T @ (rows.sampling * sign * rows.pure))

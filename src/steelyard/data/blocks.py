@@ -6,7 +6,7 @@ outside it still count as members of their strata and PSUs: ``Units`` remembers 
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -34,6 +34,8 @@ class Block:
         The sampling weight ``s`` (>= 0).
     unit : (n,) int64
         Index of the row's unit in the last stage of ``Units.stages``.
+    replicates : (n, R) float64 or float32, as the extract holds them, or None
+        Replicate weights that came with the extract.
     """
 
     position: Integers
@@ -41,9 +43,23 @@ class Block:
     exposure: Floats
     weight: Floats
     unit: Integers
+    replicates: Floats | NDArray[np.float32] | None = None
 
     def __len__(self) -> int:
         return len(self.position)
+
+    def pieces(self, rows: int) -> Iterator[Block]:
+        """Give the block in pieces of so many rows, as views: many columns of weights need short ones."""
+        for first in range(0, len(self), rows):
+            run = slice(first, first + rows)
+            yield Block(
+                self.position[run],
+                self.columns[run],
+                self.exposure[run],
+                self.weight[run],
+                self.unit[run],
+                None if self.replicates is None else self.replicates[run],
+            )
 
 
 @dataclass(frozen=True)

@@ -15,20 +15,18 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from itertools import pairwise
 from typing import Protocol, runtime_checkable
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import sparse
 
 from steelyard.data.blocks import Block, Rows
 from steelyard.data.passes import Engine
+from steelyard.data.unit_totals import Product, UnitTotals, sums_by_index, totals_by_unit
 from steelyard.design.survey import SurveyDesign
 
 Floats = NDArray[np.float64]
 Integers = NDArray[np.int64]
-Product = tuple[Floats, Floats]
 
 
 @runtime_checkable
@@ -143,22 +141,22 @@ def _as_influence(influence: Influence | Callable[[Block], Floats], rows: Rows) 
 
 def _totals(
     design: SurveyDesign, rows: Rows, engine: Engine, influence: Influence, stage: int, what: str
-) -> _Totals:
+) -> UnitTotals:
     kernel = _TotalsKernel(influence, design.units.ancestor(stage))
-    return engine.run(what, rows.blocks, kernel, _Totals.merged)
+    return engine.run(what, rows.blocks, kernel, UnitTotals.merged)
 
 
 # Units to a slice when deviations are formed: keeps them in cache, and no second array of all units.
 SLICE = 4096
 
 
-def _clusters_part(design: SurveyDesign, stage: int, totals: _Totals, matrix: Floats) -> Floats:
+def _clusters_part(design: SurveyDesign, stage: int, totals: UnitTotals, matrix: Floats) -> Floats:
     """Return the part of the variance that one stage of clusters brings, from its units' totals."""
     factor = design.factors[stage - 1]
     peers = design.peers(stage)[design.units.stages[stage].parent]
     seen = peers[totals.unit]
     counts = np.bincount(peers, minlength=len(factor))
-    centre = _centre(design, stage, _sums(seen, totals.values, len(factor)) @ matrix, counts)
+    centre = _centre(design, stage, sums_by_index(seen, totals.values, len(factor)) @ matrix, counts)
     root = np.sqrt(factor)
     part = _of_zeros(centre, factor, counts - np.bincount(seen, minlength=len(factor)))
     for first in range(0, len(seen), SLICE):
@@ -171,7 +169,7 @@ def _clusters_part(design: SurveyDesign, stage: int, totals: _Totals, matrix: Fl
 
 
 def _rows_part(
-    design: SurveyDesign, rows: Rows, engine: Engine, influence: Influence, totals: _Totals, what: str
+    design: SurveyDesign, rows: Rows, engine: Engine, influence: Influence, totals: UnitTotals, what: str
 ) -> Floats:
     """Return the part that rows as the last stage bring: a second pass over their deviations.
 
@@ -179,7 +177,7 @@ def _rows_part(
     """
     stage, factor, last = design.stages, design.factors[-1], design.units.stages[-1]
     peers = design.peers(stage)
-    sums = _sums(peers[totals.unit], totals.values, len(factor)) @ influence.matrix
+    sums = sums_by_index(peers[totals.unit], totals.values, len(factor)) @ influence.matrix
     centre = _centre(design, stage, sums, np.bincount(peers, last.rows, len(factor)))
     seen = engine.run(what, rows.blocks, _DeviationsKernel(influence, peers, centre, np.sqrt(factor)))
     unseen = np.bincount(peers, last.rows - last.domain_rows, len(factor))
@@ -200,12 +198,6 @@ def _of_zeros(centre: Floats, factor: Floats, count: NDArray[np.number]) -> Floa
     return np.asarray(deviation.T @ deviation)
 
 
-def _sums(index: Integers, values: Floats, size: int) -> Floats:
-    """Return the sums of the rows of ``values`` that share an index, (size, m)."""
-    entries = (np.ones(len(index)), (index, np.arange(len(index))))
-    return np.asarray(sparse.csr_array(entries, shape=(size, len(index))) @ values)
-
-
 @dataclass(frozen=True)
 class _DeviationsKernel:
     """Cross-products of the rows' deviations from the means of their peers, (k, k)."""
@@ -224,77 +216,12 @@ class _DeviationsKernel:
 
 
 @dataclass(frozen=True)
-class _Totals:
-    """Totals of products in some units, in their order: a part is no larger than what its blocks touched."""
-
-    unit: Integers
-    values: Floats
-
-    def merged(self, other: _Totals) -> _Totals:
-        """Return the totals of both; runs of an extract in the order of its units need no search."""
-        if self.unit[-1] <= other.unit[0]:
-            shared = int(self.unit[-1] == other.unit[0])
-            values = np.concatenate([self.values, other.values[shared:]])
-            if shared:
-                values[len(self.unit) - 1] += other.values[0]
-            return _Totals(np.concatenate([self.unit, other.unit[shared:]]), values)
-        if np.array_equal(self.unit, other.unit):
-            return _Totals(self.unit, self.values + other.values)
-        unit = np.union1d(self.unit, other.unit)
-        values = np.zeros((len(unit), self.values.shape[1]))
-        for part in (self, other):
-            values[np.searchsorted(unit, part.unit)] += part.values
-        return _Totals(unit, values)
-
-    def above(self, parent: Integers) -> _Totals:
-        """Return the totals of the units above, given the parent of every unit of this stage."""
-        unit, place = np.unique(parent[self.unit], return_inverse=True)
-        return _Totals(unit, _sums(place, self.values, len(unit)))
-
-    def combined(self, matrix: Floats, count: int) -> Floats:
-        """Return the totals of estimates' influences in all ``count`` units of the stage, (count, k)."""
-        totals = np.zeros((count, matrix.shape[1]))
-        totals[self.unit] = self.values @ matrix
-        return totals
-
-
-# Runs of rows of one unit this long on average are summed by a matrix product each; shorter ones together.
-LONG_RUN = 32
-
-
-@dataclass(frozen=True)
 class _TotalsKernel:
     """Totals of the products of ``s u`` by unit, (units of the block, m)."""
 
     influence: Influence
     unit: Integers
 
-    def __call__(self, block: Block) -> _Totals:
-        unit = self.unit[block.unit]
+    def __call__(self, block: Block) -> UnitTotals:
         products = [(f * block.weight[:, np.newaxis], z) for f, z in self.influence.products(block)]
-        edges = _edges(unit)
-        if (len(edges) - 1) * LONG_RUN > len(unit):
-            return _in_any_order(products, unit)
-        found, run_place = np.unique(unit[edges[:-1]], return_inverse=True)
-        values = np.zeros((len(found), len(self.influence.matrix)))
-        for place, (a, b) in zip(run_place.tolist(), pairwise(edges.tolist()), strict=True):
-            values[place] += np.concatenate([(f[a:b].T @ z[a:b]).ravel() for f, z in products])
-        return _Totals(found, values)
-
-
-def _edges(unit: Integers) -> Integers:
-    """Return where runs of equal units begin, and the end."""
-    return np.concatenate([[0], np.flatnonzero(np.diff(unit)) + 1, [len(unit)]])
-
-
-def _in_any_order(products: list[Product], unit: Integers) -> _Totals:
-    """Return the totals of products by unit, for rows in any order."""
-    order = np.argsort(unit, kind="stable")
-    starts = _edges(unit[order])
-    found = unit[order[starts[:-1]]]
-    parts = [
-        np.asarray(sparse.csr_array((f[order, j], order, starts), shape=(len(found), len(unit))) @ z)
-        for f, z in products
-        for j in range(f.shape[1])
-    ]
-    return _Totals(found, np.concatenate(parts, axis=1))
+        return totals_by_unit(products, self.unit[block.unit])

@@ -9,10 +9,11 @@ from typing import Any, Literal
 import numpy as np
 from numpy.typing import NDArray
 
+from steelyard.data.unit_totals import Product
+
 Floats = NDArray[np.float64]
 
-# Factors (n, J) and columns (n, q): J q products, the factor's columns outermost.
-Product = tuple[Floats, Floats]
+
 Weighing = Literal["sampling", "combined", "pure"]
 
 

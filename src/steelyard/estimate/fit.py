@@ -8,8 +8,8 @@ or units could harm it.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -21,6 +21,7 @@ from steelyard.estimate.moments import Moments
 from steelyard.estimate.newton import Newton
 from steelyard.estimate.regression import Regression, Scale, model_scale
 from steelyard.estimate.together import solve_replicates
+from steelyard.estimate.weights import WeightColumns
 
 Floats = NDArray[np.float64]
 
@@ -76,8 +77,25 @@ def fit(regression: Regression, moments: Moments, engine: Engine, blocks: Sequen
         The full sample has no solution within the allowed steps.
     """
     newton = Newton(regression, model_scale(moments, regression.intercept), engine, blocks)
-    solution = newton.solve()
-    information = newton.observed_information(solution)
+    solution = newton.under(0).solve()
+    information = newton.under(0).observed_information(solution)
     aliased = tuple(n for n, kept in zip(regression.names, information.keep, strict=True) if not kept)
     scaled, failed = solve_replicates(newton, solution.b, information)
     return Fit(regression, newton.scale, scaled, information, aliased, solution.steps, failed)
+
+
+def refit(
+    full: Fit,
+    weights: WeightColumns,
+    engine: Engine,
+    blocks: Sequence[Block],
+    unsolvable: Mapping[int, str] | None = None,
+) -> Fit:
+    """Return the fit under other columns of weights, whose column 0 is that of ``full``.
+
+    ``unsolvable`` names columns whose weights are not there, and why; they are passed on as failed.
+    """
+    regression = replace(full.regression, weights=weights)
+    newton = Newton(regression, full.scale, engine, blocks)
+    scaled, failed = solve_replicates(newton, full.scaled[:, 0], full.information, unsolvable)
+    return replace(full, regression=regression, scaled=scaled, failed=failed)

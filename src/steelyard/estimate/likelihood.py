@@ -12,7 +12,6 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import special
 from statsmodels.genmod import families
 
 Floats = NDArray[np.float64]
@@ -57,14 +56,13 @@ class Likelihood:
     def mean(self, eta: Floats) -> Floats:
         """Return ``g^-1(eta)``, of the shape of ``eta``."""
         if self.link == "logit":
-            return np.asarray(special.expit(eta))
+            return _expit(eta)
         return np.asarray(_link(self.link).inverse(eta))
 
     def mean_slope(self, eta: Floats) -> Floats:
         """Return ``d mean / d eta``, of the shape of ``eta``."""
         if self.link == "logit":
-            mu = special.expit(eta)
-            return np.asarray(mu * special.expit(-eta))
+            return np.asarray(_expit(eta) * _expit(-eta))
         return np.asarray(_link(self.link).inverse_deriv(eta))
 
     def predictor(self, mean: Floats) -> Floats:
@@ -120,6 +118,15 @@ class Likelihood:
 
     def _variance(self, mu: Floats) -> Floats:
         return np.asarray(self._family.variance(mu))
+
+
+def _expit(eta: Floats) -> Floats:
+    """Return ``1 / (1 + exp(-eta))``: numpy's exponential does several rows at a time, scipy's expit does not."""
+    out = np.negative(eta, dtype=np.float64)
+    with np.errstate(over="ignore"):
+        np.exp(out, out=out)
+    out += 1
+    return np.reciprocal(out, out=out)
 
 
 @cache

@@ -7,7 +7,7 @@ looked at, and the step halved until it does not rise.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -36,11 +36,10 @@ class _StepKernel:
     regression: Regression
     scale: Scale
     b: Floats
-    column: int
 
     def __call__(self, block: Block) -> tuple[Floats, Floats, int]:
         likelihood = self.regression.likelihood
-        x, y, w, eta = _counted_rows(self.regression, self.scale, self.b, self.column, block)
+        x, y, w, eta = _counted_rows(self.regression, self.scale, self.b, block)
         size = len(self.b)
         if not likelihood.admissible(eta):
             return np.zeros(size), np.zeros((size, size)), 1
@@ -56,21 +55,21 @@ class _DevianceKernel:
     regression: Regression
     scale: Scale
     b: Floats
-    column: int
 
     def __call__(self, block: Block) -> float:
-        _, y, w, eta = _counted_rows(self.regression, self.scale, self.b, self.column, block)
+        _, y, w, eta = _counted_rows(self.regression, self.scale, self.b, block)
         likelihood = self.regression.likelihood
         return likelihood.deviance(y, eta, w) if likelihood.admissible(eta) else np.inf
 
 
 def _counted_rows(
-    regression: Regression, scale: Scale, b: Floats, column: int, block: Block
+    regression: Regression, scale: Scale, b: Floats, block: Block
 ) -> tuple[Floats, Floats, Floats, Floats]:
     """Return columns, response, weight and linear predictor of the rows that carry weight."""
     x, y = scale(regression.columns(block)), regression.response(block)
-    w = regression.weights(block)[:, column]
-    counted = w > 0
+    w = regression.weights(block)[:, 0]
+    # A producer's replicate weights may be negative; such rows count.
+    counted = w != 0
     if not counted.all():
         x, y, w = x[counted], y[counted], w[counted]
     return x, y, w, x @ b
@@ -78,7 +77,7 @@ def _counted_rows(
 
 @dataclass(frozen=True)
 class _InformationKernel:
-    """From a block to the observed information of the full sample at ``b``."""
+    """From a block to the observed information at ``b``."""
 
     regression: Regression
     scale: Scale
@@ -88,7 +87,7 @@ class _InformationKernel:
         x = self.scale(self.regression.columns(block))
         w = self.regression.weights(block)[:, 0]
         h = self.regression.likelihood.information(self.regression.response(block), x @ self.b)
-        return x.T @ (x * np.where(w > 0, w * h, 0)[:, np.newaxis])
+        return x.T @ (x * np.where(w != 0, w * h, 0)[:, np.newaxis])
 
 
 @dataclass(frozen=True)
@@ -112,13 +111,16 @@ class Solution:
 
 @dataclass(frozen=True)
 class Newton:
-    """Newton's method (Fisher scoring off the canonical link) under one column of weights."""
+    """Newton's method (Fisher scoring off the canonical link) under column 0 of the regression's weights."""
 
     regression: Regression
     scale: Scale
     engine: Engine
     blocks: Sequence[Block]
-    column: int = 0
+
+    def under(self, column: int) -> Newton:
+        """Return Newton's method under another column of the weights."""
+        return replace(self, regression=self.regression.under([column]))
 
     def solve(self, start: Floats | None = None) -> Solution:
         """Return the solution, from ``start`` (p,) or from the mean response.
@@ -191,7 +193,7 @@ class Newton:
         return b
 
     def _at(self, b: Floats) -> tuple[Floats, Floats, int]:
-        kernel = _StepKernel(self.regression, self.scale, b, self.column)
+        kernel = _StepKernel(self.regression, self.scale, b)
         return self.engine.run(f"{self.regression.what}: fit", self.blocks, kernel)
 
     def _step(
@@ -215,12 +217,12 @@ class Newton:
         raise self._failure("found no step that improves it")
 
     def _deviance(self, b: Floats) -> float:
-        kernel = _DevianceKernel(self.regression, self.scale, b, self.column)
+        kernel = _DevianceKernel(self.regression, self.scale, b)
         return self.engine.run(f"{self.regression.what}: deviance", self.blocks, kernel)
 
     def _look_for_separation(self, direction: Floats) -> None:
         if self.regression.likelihood.family == "binomial":
-            refuse_separation(self.regression, self.scale, direction, self.engine, self.blocks, self.column)
+            refuse_separation(self.regression, self.scale, direction, self.engine, self.blocks)
 
     def _failure(self, what: str) -> EstimationError:
         return EstimationError(

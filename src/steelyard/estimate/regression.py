@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -32,6 +32,10 @@ class Regression:
     likelihood: Likelihood
     intercept: int | None
     what: str
+
+    def under(self, columns: Sequence[int] | NDArray[np.int64]) -> Regression:
+        """Return the regression under some of its columns of weights."""
+        return replace(self, weights=self.weights.only(columns))
 
 
 # Means up to this many standard deviations, and standard deviations within this factor of 1, cost a

@@ -68,11 +68,10 @@ def refuse_separation(
     direction: Floats,
     engine: Engine,
     blocks: Sequence[Block],
-    column: int = 0,
 ) -> None:
     """Refuse if ``direction`` (p,), where Newton's steps are heading, separates the response.
 
-    ``column`` says under which column of weights: rows of weight zero do not count.
+    Rows without weight in column 0 do not count.
 
     Raises
     ------
@@ -84,7 +83,7 @@ def refuse_separation(
         return
     direction = np.where(reach > DIRECTION_TOLERANCE * reach.max(), direction, 0) / reach.max()
     against, settled, rows = engine.run(
-        f"{regression.what}: separation", blocks, _DirectionKernel(regression, scale, direction, column)
+        f"{regression.what}: separation", blocks, _DirectionKernel(regression, scale, direction)
     )
     if against or not settled:
         return
@@ -107,10 +106,9 @@ class _DirectionKernel:
     regression: Regression
     scale: Scale
     direction: Floats
-    column: int
 
     def __call__(self, block: Block) -> tuple[int, int, int]:
-        counted = self.regression.weights(block)[:, self.column] > 0
+        counted = self.regression.weights(block)[:, 0] != 0
         x = self.scale(self.regression.columns(block))[counted]
         sign = np.where(self.regression.response(block)[counted] > 0.5, 1.0, -1.0)
         lean = sign * (x @ self.direction)

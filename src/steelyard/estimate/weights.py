@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Protocol
+from typing import Protocol, runtime_checkable
 
 import numpy as np
 from numpy.typing import NDArray
@@ -11,13 +12,44 @@ from numpy.typing import NDArray
 from steelyard.data.blocks import Block
 
 Floats = NDArray[np.float64]
+Integers = NDArray[np.int64]
 
 
 class WeightColumns(Protocol):
     """A picklable callable from a block to its (n, K) weights; column 0 is the full sample."""
 
+    @property
+    def count(self) -> int:
+        """How many columns there are, K."""
+        ...
+
     def __call__(self, block: Block) -> Floats:
         """Return the block's (n, K) weights."""
+        ...
+
+    def only(self, columns: Sequence[int] | Integers) -> WeightColumns:
+        """Return some of the columns, in the order asked for."""
+        ...
+
+
+@runtime_checkable
+class UnitWeights(Protocol):
+    """Weight columns that multiply a row's own weight by a multiplier of its unit.
+
+    What adds up over rows can then be summed by unit once and multiplied after, for any number of columns.
+    """
+
+    @property
+    def units(self) -> int:
+        """How many units there are."""
+        ...
+
+    def unit(self, block: Block) -> Integers:
+        """Return the unit of each row, (n,)."""
+        ...
+
+    def multipliers(self, units: Integers) -> Floats:
+        """Return the multipliers of some units under every column, (u, K)."""
         ...
 
 
@@ -25,9 +57,15 @@ class WeightColumns(Protocol):
 class SamplingWeights:
     """The sampling weights as the only column; (n, 1)."""
 
+    count: int = 1
+
     def __call__(self, block: Block) -> Floats:
         """Return the block's sampling weights as one column."""
         return block.weight[:, np.newaxis]
+
+    def only(self, columns: Sequence[int] | Integers) -> SamplingWeights:
+        """Return the one column there is."""
+        return self
 
 
 @dataclass(frozen=True)
@@ -39,10 +77,25 @@ class UnweightedFit:
 
     columns: WeightColumns
 
+    @property
+    def count(self) -> int:
+        """How many columns there are."""
+        return self.columns.count
+
     def __call__(self, block: Block) -> Floats:
         """Return the block's (n, K) multipliers."""
         columns, weight = self.columns(block), block.weight[:, np.newaxis]
         return np.divide(columns, weight, out=np.zeros_like(columns), where=weight > 0)
+
+    def only(self, columns: Sequence[int] | Integers) -> UnweightedFit:
+        """Return some of the columns."""
+        return UnweightedFit(self.columns.only(columns))
+
+
+def multiplied_by_unit(weights: WeightColumns) -> UnitWeights | None:
+    """Return what multiplies the rows' own weights unit by unit; None where the columns are not of that kind."""
+    columns = weights.columns if isinstance(weights, UnweightedFit) else weights
+    return columns if isinstance(columns, UnitWeights) else None
 
 
 @dataclass(frozen=True)
@@ -53,4 +106,4 @@ class FullSample:
 
     def __call__(self, block: Block) -> Floats:
         """Return the full sample's weights in the block."""
-        return np.ascontiguousarray(self.columns(block)[:, 0])
+        return np.ascontiguousarray(self.columns.only([0])(block)[:, 0])

@@ -6,7 +6,8 @@ computed on those and never on weights of their own making.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
@@ -14,12 +15,13 @@ from numpy.typing import NDArray
 from scipy import linalg
 
 from steelyard.data.blocks import Block
-from steelyard.estimate.estimates import Product
+from steelyard.data.unit_totals import Product
 from steelyard.estimate.fit import Fit
 from steelyard.estimate.weights import WeightColumns
 from steelyard.exposure.estimands import RULES
 
 Floats = NDArray[np.float64]
+Integers = NDArray[np.int64]
 
 
 @dataclass(frozen=True)
@@ -29,7 +31,7 @@ class Balancing:
     Attributes
     ----------
     fit : Fit
-        The propensity model, K columns.
+        The propensity model: K columns, or the full sample's alone, which then holds for all K.
     sampling : WeightColumns
         The sampling weights, K columns.
     estimand : "ATE", "ATT", "ATC" or "ATO"
@@ -70,6 +72,32 @@ class Balancing:
         inverse = self.fit.information.inverse()
         return inverse if self.share is None else linalg.block_diag(inverse, np.eye(1))
 
+    @property
+    def count(self) -> int:
+        """How many columns of weights there are."""
+        return self.sampling.count
+
+    @property
+    def failed(self) -> Mapping[int, str]:
+        """Columns without weights, and why: those whose propensity has no solution."""
+        return self.fit.failed
+
+    def only(self, columns: Sequence[int] | Integers) -> Balancing:
+        """Return some of the columns: a ``WeightColumns``, as the object itself is."""
+        sampling = self.sampling.only(columns)
+        if self.fit.scaled.shape[1] == 1:
+            return replace(self, sampling=sampling)
+        columns = list(columns)
+        fit = replace(
+            self.fit,
+            scaled=self.fit.scaled[:, columns],
+            failed={k: self.fit.failed[c] for k, c in enumerate(columns) if c in self.fit.failed},
+        )
+        share, total, cap = (
+            None if values is None else values[columns] for values in (self.share, self.total, self.cap)
+        )
+        return replace(self, fit=fit, sampling=sampling, share=share, total=total, cap=cap)
+
     def rows(self, block: Block) -> BalancedRows:
         """Return the block with everything that weighting makes of it, computed when asked for."""
         return BalancedRows(self, block)
@@ -106,7 +134,6 @@ class BalancedRows:
     @cached_property
     def complement(self) -> Floats:
         """``1 - e``, (n, K)."""
-        # Both links are symmetric, so 1 - e keeps its digits as the mean of -eta.
         return self.plan.fit.regression.likelihood.mean(-self.eta)
 
     @cached_property
@@ -120,11 +147,22 @@ class BalancedRows:
         return np.asarray(self.block.exposure[:, np.newaxis] == 1)
 
     @cached_property
+    def groups(self) -> tuple[Integers, Integers]:
+        """The places of the exposed and of the reference rows."""
+        is_exposed = self.block.exposure == 1
+        return np.flatnonzero(is_exposed), np.flatnonzero(~is_exposed)
+
+    @cached_property
     def pure(self) -> Floats:
         """The estimand's weight of the propensity alone, before stabilizing and trimming; (n, K)."""
-        e, f, rule = self.propensity, self.complement, self.balancing_rule
+        rule, eta, mean = self.balancing_rule, self.eta, self.plan.fit.regression.likelihood.mean
+        pure = np.empty_like(eta)
         with np.errstate(divide="ignore", over="ignore", invalid="ignore"):
-            return np.where(self.exposed, rule.exposed(e, f), rule.reference(e, f))
+            for members, of_group in zip(self.groups, (rule.exposed, rule.reference), strict=True):
+                # Both links are symmetric, so 1 - e keeps its digits as the mean of -eta.
+                here = eta[members]
+                pure[members] = of_group(mean(here), mean(-here))
+        return pure
 
     @cached_property
     def pure_slope(self) -> Floats:
@@ -153,7 +191,8 @@ class BalancedRows:
     @cached_property
     def uncapped(self) -> Floats:
         """Balancing weights before the cap, (n, K)."""
-        return np.where(self.outside, 0.0, self.pure * self.stabilizer)
+        balancing = self.pure if self.plan.share is None else self.pure * self.stabilizer
+        return balancing if self.plan.propensity_range is None else np.where(self.outside, 0.0, balancing)
 
     @cached_property
     def ceiling(self) -> Floats:
@@ -173,7 +212,7 @@ class BalancedRows:
     @cached_property
     def balancing(self) -> Floats:
         """The balancing weights ``c``: stabilized, trimmed and capped as asked; (n, K)."""
-        return np.asarray(np.minimum(self.uncapped, self.ceiling))
+        return self.uncapped if self.plan.cap is None else np.minimum(self.uncapped, self.ceiling)
 
     @cached_property
     def combined(self) -> Floats:

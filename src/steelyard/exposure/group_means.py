@@ -10,8 +10,10 @@ from numpy.typing import NDArray
 
 from steelyard.data.blocks import Block
 from steelyard.data.passes import Engine
-from steelyard.estimate.estimates import Estimates, Product, Weighing
+from steelyard.data.unit_totals import Product
+from steelyard.estimate.estimates import Estimates, Weighing
 from steelyard.exposure.balancing import BalancedRows, Balancing
+from steelyard.exposure.one_pass import sums_in_one_pass
 from steelyard.exposure.weighing import weights
 
 Floats = NDArray[np.float64]
@@ -104,22 +106,44 @@ def group_means(
     blocks: Sequence[Block],
 ) -> GroupMeans:
     """Return the weighted means of ``columns`` in each group, under every column of weights."""
-    sums, weight = engine.run(f"means, {weighing} weights", blocks, _SumsKernel(columns, weighing, balancing))
-    with np.errstate(divide="ignore", invalid="ignore"):
-        means = sums / weight[:, np.newaxis, :]
-    return GroupMeans(names, columns, weighing, means, weight)
+    asked = MeansAsked(names, columns, weighing)
+    kernels = {"means": asked.kernel}
+    return asked.made_of(
+        sums_in_one_pass(f"means, {weighing} weights", kernels, balancing, engine, blocks)["means"]
+    )
 
 
 @dataclass(frozen=True)
-class _SumsKernel:
+class MeansAsked:
+    """Means that are asked for: ``kernel`` gives their sums in any pass, ``made_of`` makes means of those."""
+
+    names: tuple[str, ...]
     columns: Callable[[Block], Floats]
     weighing: Weighing
-    balancing: Balancing
 
-    def __call__(self, block: Block) -> tuple[Floats, Floats]:
-        rows = self.balancing.rows(block)
-        under, z = weights(rows, self.weighing), self.columns(block)
-        count = under.shape[1]
-        both = np.concatenate([np.where(rows.exposed, under, 0), np.where(rows.exposed, 0, under)], axis=1)
-        sums = z.T @ both
-        return np.stack([sums[:, :count], sums[:, count:]]), both.sum(axis=0).reshape(2, count)
+    @property
+    def kernel(self) -> SumsKernel:
+        """From balanced rows to the sums that the means are made of."""
+        return SumsKernel(self.columns, self.weighing)
+
+    def made_of(self, sums: tuple[Floats, Floats]) -> GroupMeans:
+        """Return the means of the kernel's sums over all rows."""
+        totals, weight = sums
+        with np.errstate(divide="ignore", invalid="ignore"):
+            means = totals / weight[:, np.newaxis, :]
+        return GroupMeans(self.names, self.columns, self.weighing, means, weight)
+
+
+@dataclass(frozen=True)
+class SumsKernel:
+    """From balanced rows to the weighted sums of some columns in each group (2, q, K), and of ones (2, K)."""
+
+    columns: Callable[[Block], Floats]
+    weighing: Weighing
+
+    def __call__(self, rows: BalancedRows) -> tuple[Floats, Floats]:
+        """Return the sums of the rows."""
+        under, z = weights(rows, self.weighing), self.columns(rows.block)
+        by_group = [under[members] for members in rows.groups]
+        sums = [z[members].T @ w for members, w in zip(rows.groups, by_group, strict=True)]
+        return np.stack(sums), np.stack([w.sum(axis=0) for w in by_group])

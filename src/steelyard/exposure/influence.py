@@ -16,7 +16,8 @@ from numpy.typing import NDArray
 
 from steelyard.data.blocks import Block
 from steelyard.data.passes import Engine
-from steelyard.estimate.estimates import Estimates, Product, expanded
+from steelyard.data.unit_totals import Product
+from steelyard.estimate.estimates import Estimates, expanded
 from steelyard.exposure.balancing import BalancedRows, Balancing
 from steelyard.exposure.weighing import relative_weight, weight_slopes
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -9,9 +10,10 @@ from numpy.typing import NDArray
 
 from steelyard.data.blocks import Block, Rows
 from steelyard.data.passes import Engine
+from steelyard.data.unit_totals import Product
 from steelyard.errors import OverlapError
-from steelyard.estimate.estimates import Estimates, Product
-from steelyard.estimate.fit import Fit, fit
+from steelyard.estimate.estimates import Estimates
+from steelyard.estimate.fit import Fit, fit, refit
 from steelyard.estimate.likelihood import Likelihood
 from steelyard.estimate.regression import Regression, model_moments
 from steelyard.estimate.separation import refuse_separating_columns
@@ -75,6 +77,13 @@ def no_products(rows: BalancedRows) -> list[Product]:
     return []
 
 
+def refit_propensity(
+    full: Fit, exposure: Exposure, sampling: WeightColumns, engine: Engine, blocks: Sequence[Block]
+) -> Fit:
+    """Fit the propensity under other columns of weights, whose column 0 is that of ``full``."""
+    return refit(full, sampling if exposure.weighted else UnweightedFit(sampling), engine, blocks)
+
+
 def balancing(
     rows: Rows, exposure: Exposure, propensity: Fit, sampling: WeightColumns, engine: Engine
 ) -> Balancing:
@@ -94,13 +103,36 @@ def balancing(
         exposure.weighted,
         propensity_range=exposure.propensity_range,
     )
-    if exposure.stabilize:
-        weighted, total = engine.run("share of the exposed", rows.blocks, _ShareKernel(sampling))
-        made = replace(made, share=weighted / total, total=total)
+    made = _stabilized(made, exposure, engine, rows.blocks)
     _refuse_empty_groups(rows, made, engine)
-    if exposure.cap_quantile is not None:
-        made = replace(made, cap=_caps(rows, made, exposure.cap_quantile, engine))
-    return made
+    return _capped(made, exposure, engine, rows.blocks)
+
+
+def rebalanced(
+    full: Balancing,
+    exposure: Exposure,
+    propensity: Fit,
+    sampling: WeightColumns,
+    engine: Engine,
+    blocks: Sequence[Block],
+) -> Balancing:
+    """Return the balancing weights under other columns of weights, each with a share and a cap of its own."""
+    made = replace(full, fit=propensity, sampling=sampling, share=None, total=None, cap=None)
+    return _capped(_stabilized(made, exposure, engine, blocks), exposure, engine, blocks)
+
+
+def _stabilized(made: Balancing, exposure: Exposure, engine: Engine, blocks: Sequence[Block]) -> Balancing:
+    if not exposure.stabilize:
+        return made
+    weighted, total = engine.run("share of the exposed", blocks, _ShareKernel(made.sampling))
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return replace(made, share=weighted / total, total=total)
+
+
+def _capped(made: Balancing, exposure: Exposure, engine: Engine, blocks: Sequence[Block]) -> Balancing:
+    if exposure.cap_quantile is None:
+        return made
+    return replace(made, cap=_caps(made, exposure.cap_quantile, engine, blocks))
 
 
 @dataclass(frozen=True)
@@ -114,7 +146,7 @@ class _ShareKernel:
 
 @dataclass(frozen=True)
 class _GroupsKernel:
-    """Count, in the full sample, the rows with weight in each group and the weights that are not finite."""
+    """Count, in column 0, the rows with weight in each group and the weights that are not finite."""
 
     balancing: Balancing
 
@@ -128,7 +160,7 @@ class _GroupsKernel:
 
 
 def _refuse_empty_groups(rows: Rows, made: Balancing, engine: Engine) -> None:
-    counts = engine.run("balancing weights", rows.blocks, _GroupsKernel(made))
+    counts = engine.run("balancing weights", rows.blocks, _GroupsKernel(made.only([0])))
     if counts[2]:
         raise OverlapError(
             f"{counts[2]:,} row(s) have a propensity so near 0 or 1 that their {made.estimand} weight has no "
@@ -149,31 +181,29 @@ class _CombinedKernel:
     """The uncapped combined weights under the full sample's ``s``, and each replicate's multiplier."""
 
     balancing: Balancing
-    columns: slice
 
     def __call__(self, block: Block) -> list[tuple[Floats, Floats]]:
         balanced = self.balancing.rows(block)
         weight = block.weight[:, np.newaxis]
         counted = block.weight > 0
-        multiplier = balanced.sampling[counted, self.columns] / weight[counted]
-        return [((weight * balanced.uncapped[:, self.columns])[counted], multiplier)]
+        multiplier = balanced.sampling[counted] / weight[counted]
+        return [((weight * balanced.uncapped)[counted], multiplier)]
 
 
-def _caps(rows: Rows, made: Balancing, quantile: float, engine: Engine) -> Floats:
+def _caps(made: Balancing, quantile: float, engine: Engine, blocks: Sequence[Block]) -> Floats:
     """Return, for each column, the quantile of the positive combined weights."""
-    count = made.fit.scaled.shape[1]
-    caps = np.empty(count)
-    for first in range(0, count, COLUMNS_GATHERED):
-        some = slice(first, min(first + COLUMNS_GATHERED, count))
-        parts = engine.run("cap of the combined weights", rows.blocks, _CombinedKernel(made, some))
+    caps = np.empty(made.count)
+    for first in range(0, made.count, COLUMNS_GATHERED):
+        some = np.arange(first, min(first + COLUMNS_GATHERED, made.count))
+        parts = engine.run("cap of the combined weights", blocks, _CombinedKernel(made.only(some)))
         combined = np.concatenate([part[0] for part in parts])
         multiplier = np.concatenate([part[1] for part in parts])
-        for j in range(combined.shape[1]):
-            caps[first + j] = _quantile(combined[:, j], multiplier[:, j], quantile)
+        for j, column in enumerate(some):
+            caps[column] = weighted_quantile(combined[:, j], multiplier[:, j], quantile)
     return caps
 
 
-def _quantile(values: Floats, weight: Floats, quantile: float) -> float:
+def weighted_quantile(values: Floats, weight: Floats, quantile: float) -> float:
     """Return the smallest positive value at which the cumulated weight reaches ``quantile`` of the total."""
     counted = (values > 0) & (weight > 0)
     if not counted.any():

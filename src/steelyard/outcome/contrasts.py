@@ -2,19 +2,16 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from steelyard.data.blocks import Block
-from steelyard.data.passes import Engine
 from steelyard.estimate.estimates import Estimates
 from steelyard.estimate.likelihood import Likelihood
-from steelyard.exposure.balancing import Balancing
-from steelyard.exposure.group_means import GroupMeans, group_means
-from steelyard.outcome.measures import SCALES, refuse_undefined
+from steelyard.exposure.group_means import GroupMeans, MeansAsked
+from steelyard.outcome.measures import SCALES, outcome_label, refuse_undefined
 from steelyard.plan import Outcome
 
 Floats = NDArray[np.float64]
@@ -34,21 +31,16 @@ class OutcomeColumns:
         return block.columns[:, list(self.places)]
 
 
-def outcome_means(
-    names: tuple[str, ...],
-    places: tuple[int, ...],
-    balancing: Balancing,
-    engine: Engine,
-    blocks: Sequence[Block],
-) -> GroupMeans:
-    """Return the combined-weight means of the outcomes in each group."""
-    return group_means(names, OutcomeColumns(places), "combined", balancing, engine, blocks)
+def outcome_means_asked(outcomes: tuple[Outcome, ...], places: tuple[int, ...]) -> MeansAsked:
+    """Ask for the combined-weight means of the outcomes in each group."""
+    names = tuple(outcome_label(outcome, outcomes) for outcome in outcomes)
+    return MeansAsked(names, OutcomeColumns(places), "combined")
 
 
 def contrast(outcome: Outcome, place: int, name: str, means: GroupMeans) -> Estimates:
     """Return one outcome's contrast on the scale of its measure's link.
 
-    ``place`` is the outcome's place in ``means``, which are those of :func:`outcome_means`. The difference of
+    ``place`` is the outcome's place in ``means``, which are those of :func:`outcome_means_asked`. The difference of
     means is the coefficient of the exposure in a weighted regression on exposure alone; the ratio and the
     odds ratio likewise, with a log and a logit link.
 

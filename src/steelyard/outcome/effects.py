@@ -9,8 +9,8 @@ from steelyard.data.passes import Engine
 from steelyard.estimate.estimates import Estimates
 from steelyard.exposure.balancing import Balancing
 from steelyard.exposure.group_means import GroupMeans
-from steelyard.outcome.contrasts import contrast, outcome_means
-from steelyard.outcome.measures import outcome_label
+from steelyard.exposure.one_pass import sums_in_one_pass
+from steelyard.outcome.contrasts import contrast, outcome_means_asked
 from steelyard.outcome.regression import OutcomeRegression, outcome_regression
 from steelyard.plan import Outcome
 
@@ -34,25 +34,43 @@ class Effects:
     regressions: tuple[OutcomeRegression | None, ...]
 
 
-def effects(rows: Rows, outcomes: tuple[Outcome, ...], balancing: Balancing, engine: Engine) -> Effects:
+def effects(
+    rows: Rows,
+    outcomes: tuple[Outcome, ...],
+    balancing: Balancing,
+    engine: Engine,
+    *,
+    full: Effects | None = None,
+    means: GroupMeans | None = None,
+) -> Effects:
     """Estimate the effect on every outcome.
+
+    ``full`` are the effects under column 0 where they are known already: outcome models then start at theirs.
+    ``means`` are those that :func:`steelyard.outcome.contrasts.outcome_means_asked` asks for, where a pass has
+    found them already.
 
     Raises
     ------
     EstimationError
         A measure is not defined for an outcome's means, or an outcome model does not settle.
     """
-    names = tuple(outcome_label(outcome, outcomes) for outcome in outcomes)
-    means = outcome_means(names, rows.outcomes, balancing, engine, rows.blocks)
+    if means is None:
+        asked = outcome_means_asked(outcomes, rows.outcomes)
+        kernels = {"outcomes": asked.kernel}
+        sums = sums_in_one_pass("outcomes: means", kernels, balancing, engine, rows.blocks)
+        means = asked.made_of(sums["outcomes"])
     estimates, regressions = [], []
-    for place, (outcome, name, model) in enumerate(zip(outcomes, names, rows.outcome_models, strict=True)):
-        if model is None:
-            regression = None
-            estimates.append(contrast(outcome, place, name, means))
-        else:
+    for place, (outcome, name, model) in enumerate(
+        zip(outcomes, means.names, rows.outcome_models, strict=True)
+    ):
+        before = None if full is None else full.regressions[place]
+        regression = None
+        if before is not None:
+            regression = before.under(balancing, engine, rows.blocks)
+        elif model is not None:
             regression = outcome_regression(
                 outcome, name, rows.outcomes[place], model, balancing, engine, rows.blocks
             )
-            estimates.append(regression.effect())
         regressions.append(regression)
+        estimates.append(contrast(outcome, place, name, means) if regression is None else regression.effect())
     return Effects(outcomes, means, tuple(estimates), tuple(regressions))

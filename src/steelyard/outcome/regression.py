@@ -10,9 +10,10 @@ from numpy.typing import NDArray
 
 from steelyard.data.blocks import Block, Model
 from steelyard.data.passes import Engine
+from steelyard.data.unit_totals import Product
 from steelyard.errors import PlanError
-from steelyard.estimate.estimates import Estimates, Product
-from steelyard.estimate.fit import Fit, fit
+from steelyard.estimate.estimates import Estimates
+from steelyard.estimate.fit import Fit, fit, refit
 from steelyard.estimate.likelihood import Likelihood
 from steelyard.estimate.regression import Regression, model_moments
 from steelyard.exposure.balancing import BalancedRows, Balancing
@@ -67,6 +68,10 @@ class OutcomeRegression:
         """Return the exposure's coefficient."""
         every = self.coefficients()
         return replace(every, names=(self.name,), values=every.values[-1:], combine=every.combine[:, -1:])
+
+    def under(self, balancing: Balancing, engine: Engine, blocks: Sequence[Block]) -> OutcomeRegression:
+        """Return the model under other columns of combined weights, whose column 0 is the one it has."""
+        return replace(self, fit=refit(self.fit, balancing, engine, blocks, balancing.failed))
 
 
 @dataclass(frozen=True)
