@@ -8,14 +8,17 @@ from steelyard.data.blocks import Block, Model, Rows, Term
 from steelyard.data.units import Stage, Units
 
 
-def stage(parent, rows, domain_rows, population=None, columns=("id",)):
+def stage(parent, rows, domain_rows, population=None, columns=("id",), first_rows=None):
     parent = np.asarray(parent, dtype=np.int64)
+    if first_rows is None:
+        first_rows = np.arange(len(parent))
     return Stage(
         columns=columns,
         labels=np.array([str(i) for i in range(len(parent))]),
         parent=parent,
         rows=np.asarray(rows, dtype=np.int64),
         domain_rows=np.asarray(domain_rows, dtype=np.int64),
+        first_rows=np.asarray(first_rows, dtype=np.int64),
         population=None if population is None else np.asarray(population, dtype=np.float64),
     )
 
@@ -104,7 +107,7 @@ class ColumnsOfWeights:
     def count(self):
         return self.columns.shape[1]
 
-    def __call__(self, block):
+    def __call__(self, block, out=None):
         return self.columns[block.position]
 
     def only(self, columns):

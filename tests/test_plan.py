@@ -1,7 +1,8 @@
 import pytest
 
 from steelyard.errors import PlanError
-from steelyard.plan import Design, Exposure, Outcome, Plan, plan_keys, read_plan
+from steelyard.keys import plan_keys
+from steelyard.plan import Design, Exposure, Outcome, Plan, read_plan
 
 MINIMAL = """
 [data]

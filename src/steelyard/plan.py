@@ -7,25 +7,26 @@ computed: every floor of the house may read a plan, so this module imports nothi
 from __future__ import annotations
 
 import tomllib
-import types
-from collections.abc import Mapping, Sequence
-from dataclasses import MISSING, dataclass, field, fields, is_dataclass
-from difflib import get_close_matches
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 from pathlib import Path
-from typing import Any, Literal, Union, get_args, get_origin, get_type_hints
+from typing import Any, Literal
 
 from steelyard.errors import PlanError
+from steelyard.keys import section, settle
 
 SinglePsu = Literal["refuse", "recentre", "collapse", "self-representing"]
 Estimand = Literal["ATE", "ATT", "ATC", "ATO"]
 PropensityLink = Literal["logit", "probit"]
 Family = Literal["gaussian", "binomial", "poisson"]
 Measure = Literal["difference", "ratio", "odds-ratio"]
-VarianceMethod = Literal["linearization"]
+MadeReplicates = Literal["jackknife", "brr", "fay", "bootstrap", "successive-difference"]
+VarianceMethod = Literal[
+    "linearization", "jackknife", "brr", "fay", "bootstrap", "successive-difference", "supplied"
+]
+Centre = Literal["full-sample", "replicate-mean"]
 PropensityStatus = Literal["estimated", "known"]
 Scalar = str | int | float | bool
-
-_WANTED = {str: "text", bool: "true or false", int: "a whole number", float: "a number", Path: "a path"}
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -37,7 +38,54 @@ class Data:
     missing: Mapping[str, tuple[Scalar, ...]] = field(default_factory=dict)
 
     def __post_init__(self) -> None:
-        _settle(self)
+        settle(self)
+
+
+@dataclass(frozen=True, kw_only=True)
+class SuppliedReplicates:
+    """Replicate weights that came with the extract, and what their producer says of them.
+
+    ``columns`` are names or patterns such as ``"rep_*"``, in the order of the extract; ``method`` is how they
+    were made. ``factor`` is the overall factor of the variance and ``replicate_factors`` one more for each
+    replicate, where the producer states them; ``df`` the degrees of freedom. ``centre`` says what the
+    deviations are taken from.
+    """
+
+    columns: tuple[str, ...]
+    method: MadeReplicates
+    fay: float | None = None
+    factor: float | None = None
+    replicate_factors: tuple[float, ...] = ()
+    df: float | None = None
+    centre: Centre = "full-sample"
+
+    def __post_init__(self) -> None:
+        settle(self, "design.replicates")
+        if self.method == "fay" and self.factor is None and self.fay is None:
+            raise PlanError(
+                'design.replicates has method = "fay" without its factor.',
+                mend="Give design.replicates.fay as the producer states it, or the overall factor.",
+            )
+        if self.method != "fay" and self.fay is not None:
+            raise PlanError(
+                f'design.replicates.fay is given with method = "{self.method}".',
+                mend='Fay\'s factor belongs to method = "fay".',
+            )
+        if self.method == "jackknife" and self.factor is None and not self.replicate_factors:
+            raise PlanError(
+                "design.replicates holds a jackknife, and nothing says what its squared deviations are multiplied by.",
+                mend="Give design.replicates.factor or replicate_factors as the producer states them: "
+                "(R - 1) / R for one PSU dropped at a time without strata, 1 for one of each pair, "
+                "(n - 1) / n by stratum otherwise.",
+            )
+        _refuse_fay(self.fay, "design.replicates.fay")
+        for name, value in (("factor", self.factor), ("df", self.df)):
+            if value is not None and not value > 0:
+                raise PlanError(f"design.replicates.{name} is {value:g}.", mend="It must be above 0.")
+        if any(not value >= 0 for value in self.replicate_factors):
+            raise PlanError(
+                "design.replicates.replicate_factors holds a negative value.", mend="They must be 0 or more."
+            )
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -46,7 +94,8 @@ class Design:
 
     ``clusters`` runs from the first stage down; without it every row is a PSU. ``population`` gives,
     stage by stage, the column that holds how many units of that stage the population has within
-    the unit above (for the first stage: within the stratum).
+    the unit above (for the first stage: within the stratum). ``replicates`` are replicate weights that
+    came with the extract; with them strata and clusters may be left out.
     """
 
     weight: str
@@ -54,9 +103,10 @@ class Design:
     clusters: tuple[str, ...] = ()
     population: tuple[str, ...] = ()
     single_psu: SinglePsu = "refuse"
+    replicates: SuppliedReplicates | None = None
 
     def __post_init__(self) -> None:
-        _settle(self)
+        settle(self)
         if len(self.clusters) > 3:
             raise PlanError(
                 f"design.clusters names {len(self.clusters)} stages; at most three are supported.",
@@ -96,7 +146,7 @@ class Exposure:
     reference: Scalar | None = None
 
     def __post_init__(self) -> None:
-        _settle(self)
+        settle(self)
         if self.cap_quantile is not None and not 0.5 <= self.cap_quantile < 1:
             raise PlanError(
                 f"exposure.cap_quantile is {self.cap_quantile}; it must lie from 0.5 up to, not including, 1.",
@@ -134,7 +184,7 @@ class Balance:
     interactions: bool = False
 
     def __post_init__(self) -> None:
-        _settle(self)
+        settle(self)
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -147,7 +197,7 @@ class Outcome:
     covariates: str = ""
 
     def __post_init__(self) -> None:
-        _settle(self)
+        settle(self)
         if self.measure == "odds-ratio" and self.family != "binomial":
             raise PlanError(
                 f'outcome "{self.name}" asks for an odds ratio of a {self.family} outcome.',
@@ -157,29 +207,58 @@ class Outcome:
 
 @dataclass(frozen=True, kw_only=True)
 class Variance:
-    """How standard errors are made, and whether they count the propensity's own estimation."""
+    """How standard errors are made, and whether they count the propensity's own estimation.
+
+    ``replicates`` is how many the bootstrap draws, and the least that successive difference makes; the
+    jackknife and balanced half-samples have as many as the design gives. ``seed`` starts the bootstrap;
+    ``fay`` is the factor of Fay's method. With replicates ``side_by_side`` adds the linearized variance, for
+    comparison. Replicates that fail are left out up to the share ``most_failed`` of them, beyond it refused.
+    """
 
     method: VarianceMethod = "linearization"
     propensity: PropensityStatus = "estimated"
     confidence: float = 0.95
+    replicates: int = 200
+    seed: int = 20261
+    fay: float = 0.3
+    side_by_side: bool = True
+    most_failed: float = 0.05
 
     def __post_init__(self) -> None:
-        _settle(self)
+        settle(self)
         if not 0.5 <= self.confidence < 1:
             raise PlanError(
                 f"variance.confidence is {self.confidence}; it must lie from 0.5 up to, not including, 1.",
                 mend="Write 0.95 for a 95% interval.",
             )
+        if self.replicates < 2:
+            raise PlanError(
+                f"variance.replicates is {self.replicates}.",
+                mend="A variance needs at least 2; 200 is the default.",
+            )
+        if self.seed < 0:
+            raise PlanError(f"variance.seed is {self.seed}.", mend="Give a whole number from 0 up.")
+        if not 0 <= self.most_failed < 1:
+            raise PlanError(
+                f"variance.most_failed is {self.most_failed}; it is a share of the replicates.",
+                mend="Write 0.05 to allow one in twenty to fail, 0 to allow none.",
+            )
+        _refuse_fay(self.fay, "variance.fay")
 
 
 @dataclass(frozen=True, kw_only=True)
 class Report:
-    """What may leave the house: counts under ``minimum_count`` are hidden in tables and figures."""
+    """What may leave the house: counts under ``minimum_count`` are hidden in tables and figures.
+
+    ``replicate_weights`` says whether weights.parquet holds every replicate's weights too; where it is not
+    given, it does unless they are more than a hundred million numbers.
+    """
 
     minimum_count: int = 10
+    replicate_weights: bool | None = None
 
     def __post_init__(self) -> None:
-        _settle(self)
+        settle(self)
         if self.minimum_count < 0:
             raise PlanError(
                 f"report.minimum_count is {self.minimum_count}; it cannot be negative.",
@@ -202,7 +281,12 @@ class Plan:
     folder: Path | None = field(default=None, compare=False, metadata={"key": False})
 
     def __post_init__(self) -> None:
-        _settle(self)
+        settle(self)
+        if self.variance.method == "supplied" and self.design.replicates is None:
+            raise PlanError(
+                'variance.method is "supplied", and design.replicates names no replicate weights.',
+                mend="Add [design.replicates] with their columns and method, or choose another variance.method.",
+            )
         if not self.outcome:
             raise PlanError("The plan has no outcome.", mend="Add at least one [[outcome]] with a name.")
         seen: set[tuple[str, str, str]] = set()
@@ -237,121 +321,14 @@ def read_plan(path: str | Path) -> dict[str, Any]:
             f"The plan file {path} is not valid TOML: {error}.",
             mend="Look at that line: text needs quotes, lists need brackets.",
         ) from None
-    arguments = _section(raw, Plan, "")
+    arguments = section(raw, Plan, "")
     arguments["folder"] = path.parent
     return arguments
 
 
-def plan_keys(plan: object) -> dict[str, Any]:
-    """Return the plan as plain dicts, lists and scalars: the keys a TOML file would have, defaults included."""
-    out: dict[str, Any] = {}
-    for f in fields(plan):  # type: ignore[arg-type]
-        if f.metadata.get("key", True):
-            value = _plain(getattr(plan, f.name))
-            if value is not None:
-                out[f.name] = value
-    return out
-
-
-def _plain(value: Any) -> Any:
-    if is_dataclass(value):
-        return plan_keys(value)
-    if isinstance(value, Mapping):
-        return {key: _plain(item) for key, item in value.items()}
-    if isinstance(value, tuple | list):
-        return [_plain(item) for item in value]
-    return value
-
-
-def _section(raw: Mapping[str, Any], kind: type, where: str) -> dict[str, Any]:
-    """Turn a table of the file into the keyword arguments of dataclass ``kind``, naming what does not fit."""
-    keys = {f.name: f for f in fields(kind) if f.metadata.get("key", True)}
-    place = f"[{where}]" if where else "The top level"
-    for key in raw:
-        if key not in keys:
-            near = get_close_matches(key, keys, n=1, cutoff=0.5)
-            hint = f'Did you mean "{near[0]}"?' if near else f"Known there: {', '.join(keys)}."
-            raise PlanError(f'Unknown key "{key}" in the plan: {place} does not have it.', mend=hint)
-    hints = _hints(kind)
-    required = [
-        name
-        for name, f in keys.items()
-        if f.default is MISSING and f.default_factory is MISSING and name not in raw
-    ]
-    if required:
-        raise PlanError(f'{place} of the plan lacks "{required[0]}".', mend="Add it there.")
-    return {key: _coerce(value, hints[key], f"{where}.{key}" if where else key) for key, value in raw.items()}
-
-
-def _settle(section: Any) -> None:
-    """Give every field of a section its declared type, so that Python and TOML plans are the same plan."""
-    name = type(section).__name__.lower()
-    where = "" if name == "plan" else f"{name}."
-    for f in fields(section):
-        value = _coerce(getattr(section, f.name), _hints(type(section))[f.name], where + f.name)
-        object.__setattr__(section, f.name, value)
-
-
-def _hints(kind: type) -> dict[str, Any]:
-    return get_type_hints(kind)
-
-
-def _coerce(value: Any, hint: Any, where: str) -> Any:
-    """Return ``value`` as the field's type: one word for a list of one, a table for its dataclass."""
-    origin, arguments = get_origin(hint), get_args(hint)
-    if is_dataclass(hint):
-        return _coerce_table(value, hint, where)  # type: ignore[arg-type]
-    if origin is tuple:
-        return _coerce_list(value, arguments, where)
-    if origin in (Union, types.UnionType):
-        return _coerce_union(value, arguments, where)
-    if origin is Literal:
-        return _one_of(value, hint, where)
-    if origin is not None and issubclass(origin, Mapping):
-        if not isinstance(value, Mapping):
-            raise _wrong(value, "a table", where)
-        return {str(key): _coerce(item, arguments[1], f"{where}.{key}") for key, item in value.items()}
-    if hint is float and isinstance(value, int) and not isinstance(value, bool):
-        return float(value)
-    if isinstance(value, hint) and not (hint is int and isinstance(value, bool)):
-        return value
-    raise _wrong(value, _WANTED[hint], where)
-
-
-def _coerce_table(value: Any, kind: type, where: str) -> Any:
-    if isinstance(value, kind):
-        return value
-    if not isinstance(value, Mapping):
-        raise _wrong(value, f"a table (in Python, a {kind.__name__} or a dict)", where)
-    return kind(**_section(value, kind, where))
-
-
-def _coerce_list(value: Any, arguments: tuple[Any, ...], where: str) -> tuple[Any, ...]:
-    if isinstance(value, str | int | float | Mapping) or is_dataclass(value):
-        value = (value,)
-    if not isinstance(value, Sequence):
-        raise _wrong(value, "a list", where)
-    return tuple(_coerce(item, arguments[0], where) for item in value)
-
-
-def _coerce_union(value: Any, arguments: tuple[Any, ...], where: str) -> Any:
-    if value is None and type(None) in arguments:
-        return None
-    kinds = [kind for kind in arguments if kind is not type(None)]
-    scalars = tuple(kind for kind in kinds if isinstance(kind, type))
-    if isinstance(value, scalars):
-        return value
-    return _coerce(value, kinds[0], where)
-
-
-def _one_of(value: Any, literal: Any, where: str) -> Any:
-    words = get_args(literal)
-    if value not in words:
-        near = get_close_matches(str(value), words, n=1, cutoff=0.4)
-        hint = f' Did you mean "{near[0]}"?' if near else ""
-        raise PlanError(f'{where} is "{value}".', mend=f"It is one of {', '.join(words)}.{hint}")
-    return value
-
-
-def _wrong(value: Any, wanted: str, where: str) -> PlanError:
-    return PlanError(f"{where} is {value!r}; it must be {wanted}.", mend=f"Write {wanted} there.")
+def _refuse_fay(fay: float | None, where: str) -> None:
+    if fay is not None and not 0 <= fay < 1:
+        raise PlanError(
+            f"{where} is {fay:g}; Fay's factor lies from 0 up to, not including, 1.",
+            mend="It is what the lighter PSU of a pair keeps of its weight, 0.3 or 0.5 for example.",
+        )

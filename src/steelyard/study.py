@@ -7,16 +7,18 @@ import json
 import platform
 import time
 import warnings as python_warnings
-from collections.abc import Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from concurrent.futures import Executor
 from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import partial
 from importlib.metadata import version
 from pathlib import Path
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
+import pandas as pd
+from numpy.typing import NDArray
 
 from steelyard.balance.columns import TermColumns
 from steelyard.balance.distributions import distances
@@ -31,17 +33,24 @@ from steelyard.errors import PlanError, SteelyardWarning
 from steelyard.estimate.fit import Fit
 from steelyard.estimate.moments import Moments, MomentsKernel, merge_moments
 from steelyard.estimate.weights import FullSample, SamplingWeights
+from steelyard.exposure.balancing import Balancing
 from steelyard.exposure.propensity import balancing, fit_propensity
+from steelyard.keys import plan_keys
 from steelyard.outcome.contrasts import OutcomeColumns
-from steelyard.plan import Plan, plan_keys, read_plan
+from steelyard.plan import Plan, read_plan
+from steelyard.replicates.make import scheme_of
+from steelyard.replicates.scheme import Scheme
 from steelyard.results.answer import Answer
 from steelyard.results.balance import balance_of, balance_warnings
 from steelyard.results.effects import effect_results, sensitivity_of
 from steelyard.results.estimates import EstimateResults
-from steelyard.results.groups import groups
+from steelyard.results.groups import Groups, groups
 from steelyard.results.inference import Inference, linearized
 from steelyard.results.overlap import overlap_of, overlap_warnings
-from steelyard.results.weights_file import weight_batches
+from steelyard.results.replication import Replication, replication, turns
+from steelyard.results.statistic import domain_frame, quantiles_asked, replicate_statistic
+from steelyard.results.variance_made import VarianceMade, by_linearization, by_replication, design_is_named
+from steelyard.results.weights_file import ReplicateWeights, WeightFile, is_written
 
 PACKAGES = ("steelyard", "numpy", "pandas", "scipy", "statsmodels", "patsy", "pyarrow")
 
@@ -105,12 +114,11 @@ class Study(Plan):
 
     def estimate(self, prepared: Prepared, **where: Any) -> Answer:
         """Estimate propensity, balance and effects on design rows that are ready."""
-        where.pop("block_rows", None)
         watch = _Watch(prepared.seconds)
         rows, design, blocks = prepared.rows, prepared.design, prepared.rows.blocks
         sampling = SamplingWeights()
         columns = TermColumns(rows.terms)
-        with _engine(**where) as engine:
+        with _engine(**_without_block_rows(where)) as engine:
             with watch("propensity"):
                 fit = fit_propensity(rows, self.exposure, sampling, engine)
                 made = balancing(rows, self.exposure, fit, sampling, engine)
@@ -123,52 +131,179 @@ class Study(Plan):
                 found = groups(rows, self, made, engine)
                 outcomes = _outcome_moments(rows, engine)
             with watch("variance"):
-                inference = linearized(found.with_weights_known(), made, design, rows, engine)
-        balance = balance_of(columns, moments, apart, inference, self.exposure.estimand, design.df)
-        known = self.variance.propensity == "known"
+                again = self._replication(prepared, found, made, engine)
+                linear = None
+                if again is None or (self.variance.side_by_side and self._linearizes(again)):
+                    linear = linearized(found.with_weights_known(), made, design, rows, engine)
+        inference, how = self._headline(again, linear, design)
+        balance = balance_of(columns, moments, apart, inference, self.exposure.estimand, how.df)
         as_asked = partial(
             effect_results,
             self,
             found.effects,
-            design=design,
             rows=len(rows),
             outcomes=outcomes,
             title=self.title or "Effects",
         )
-        every = range(len(self.outcome))
-        estimated_effects = as_asked(*inference.of(*(f"effect {k}" for k in every)))
-        known_effects = as_asked(*inference.of(*(f"effect {k}, propensity known" for k in every)))
-        headline = known_effects if known else estimated_effects
+        first = _both(as_asked, inference, how, len(self.outcome))
+        second = None
+        if again is not None and linear is not None:
+            second = _both(as_asked, linear, by_linearization(self, design), len(self.outcome))
+        known = self.variance.propensity == "known"
         told = (
             *rows.warnings,
             *design.notes,
             *_fit_warnings(fit),
+            *(() if again is None else (*again.found.scheme.notes, *again.found.warnings())),
             *overlap_warnings(overlap),
-            *balance_warnings(balance, design.df),
+            *balance_warnings(balance, how.df),
         )
         for text in told:
             python_warnings.warn(text, SteelyardWarning, stacklevel=2)
+        weights, not_written = self._weight_file(prepared, made, again)
         return Answer(
             plan=self,
             checkup=prepared.checkup,
             propensity=EstimateResults(
                 *inference.of("propensity"),
                 fit.regression.names,
-                design.df,
+                how.df,
                 title="Exposure model",
                 confidence=self.variance.confidence,
             ),
             overlap=overlap,
             balance=balance,
-            effects=headline,
-            effects_known=known_effects,
+            effects=first[known],
+            effects_known=first[1],
+            variance=how,
+            beside=None if second is None else second[known],
+            beside_known=None if second is None else second[1],
             sensitivity=sensitivity_of(
-                self, headline, np.sqrt(outcomes.variance.mean(axis=0)), _ratios(self, inference)
+                self, first[known], np.sqrt(outcomes.variance.mean(axis=0)), _ratios(self, inference)
             ),
-            warnings=told,
-            record=_record(self, prepared, watch.seconds, told),
-            weights=partial(weight_batches, prepared.extract, self.design.weight, rows, made),
+            warnings=(*told, *not_written),
+            record=_record(self, prepared, watch.seconds, (*told, *not_written), how),
+            weights=weights,
         )
+
+    def statistic(
+        self,
+        function: Callable[[pd.DataFrame, NDArray[np.float64]], Any],
+        extract: Any = None,
+        *,
+        columns: Sequence[str] = (),
+        weights: Literal["combined", "sampling"] = "combined",
+        **where: Any,
+    ) -> EstimateResults:
+        """Return any statistic of the domain's rows with its standard error and covariance, by replication.
+
+        Parameters
+        ----------
+        function : callable
+            From a frame of the domain's n complete rows and weights (n,) to a number, a sequence of numbers, or a
+            mapping or Series of them with names. It is called once for the full sample and once a replicate.
+        columns : columns of the extract that the frame has beside those the plan reads
+        weights : which weights the function is given
+        **where : as for :meth:`run`
+
+        Notes
+        -----
+        The propensity is estimated again in each replicate, unless ``variance.propensity`` is "known". Replicates
+        are those of ``variance.method``; where that is "linearization", the supplied ones, or else the bootstrap.
+
+        Raises
+        ------
+        SteelyardError
+            As for :meth:`run`; or the function returns no numbers, or fails in too many replicates.
+        """
+        prepared = self.prepare(extract, **where)
+        with _engine(**_without_block_rows(where)) as engine:
+            fit = fit_propensity(prepared.rows, self.exposure, SamplingWeights(), engine)
+            made = balancing(prepared.rows, self.exposure, fit, SamplingWeights(), engine)
+            scheme = self._scheme(prepared, self._replicate_method(), engine)
+            frame = domain_frame(prepared.extract, self, prepared.rows, columns)
+            again = turns(scheme, made, prepared.rows, self, engine)
+            return replicate_statistic(function, frame, made, again, scheme, prepared.rows, self, weights)
+
+    def quantiles(
+        self,
+        outcome: str,
+        at: Sequence[float] = (0.25, 0.5, 0.75),
+        extract: Any = None,
+        **where: Any,
+    ) -> EstimateResults:
+        """Return weighted quantiles of an outcome among exposed and reference, and their differences.
+
+        Standard errors are made by replication: see :meth:`statistic`. ``at`` are probabilities in (0, 1).
+
+        Raises
+        ------
+        PlanError
+            A probability is out of range, the outcome is none of the plan's, or the plan asks for the jackknife,
+            whose variance of a quantile is not consistent.
+        """
+        asked = quantiles_asked(self, outcome, tuple(at), self._replicate_method())
+        return self.statistic(asked, extract, columns=(outcome,), **where)
+
+    def _replicate_method(self) -> str:
+        """Return the method that replicates are made by where replicates are needed whatever the plan says."""
+        if self.variance.method != "linearization":
+            return self.variance.method
+        return "supplied" if self.design.replicates is not None else "bootstrap"
+
+    def _scheme(self, prepared: Prepared, method: str, engine: Engine) -> Scheme:
+        rows = prepared.rows
+        row_strata = None
+        if not rows.units.clustered and method != "supplied":
+            assert rows.unit_of is not None
+            wanted = (self.design.weight, *self.design.strata)
+            row_strata = np.concatenate(
+                [rows.unit_of(table) for _, table in prepared.extract.read(list(dict.fromkeys(wanted)))]
+            )
+        return scheme_of(self, method, rows, prepared.design, engine, row_strata)
+
+    def _replication(
+        self, prepared: Prepared, found: Groups, made: Balancing, engine: Engine
+    ) -> Replication | None:
+        if self.variance.method == "linearization":
+            return None
+        scheme = self._scheme(prepared, self.variance.method, engine)
+        return replication(found, made, scheme, prepared.rows, self, engine)
+
+    def _linearizes(self, again: Replication) -> bool:
+        """Whether linearization would know the design: not where supplied replicates alone carry it."""
+        return again.found.scheme.origin == "made" or design_is_named(self)
+
+    def _headline(
+        self, again: Replication | None, linear: Inference | None, design: SurveyDesign
+    ) -> tuple[Inference, VarianceMade]:
+        if again is not None:
+            return again.inference, by_replication(self, design, again.found)
+        assert linear is not None
+        return linear, by_linearization(self, design)
+
+    def _weight_file(
+        self, prepared: Prepared, made: Balancing, again: Replication | None
+    ) -> tuple[WeightFile, tuple[str, ...]]:
+        """Return the rows of weights.parquet, and what to say of replicate weights that are not in them."""
+        replicates = None
+        told: tuple[str, ...] = ()
+        if again is not None:
+            known = self.variance.propensity == "known"
+            replicates = ReplicateWeights(
+                again.found.scheme, [turn.known if known else turn.balancing for turn in again.turns]
+            )
+            numbers = replicates.numbers_a_row * prepared.rows.total
+            if not is_written(self.report.replicate_weights, numbers):
+                replicates = None
+                if self.report.replicate_weights is None:
+                    told = (
+                        f"The replicates' weights are {numbers:,} numbers and were not written to weights.parquet: set "
+                        "report.replicate_weights = true to have them.",
+                    )
+        design = (*self.design.strata, *self.design.clusters)
+        file = WeightFile(prepared.extract, self.design.weight, design, prepared.rows, made, replicates)
+        return file, told
 
     def _open(self, extract: Any) -> Extract:
         if extract is None:
@@ -190,6 +325,19 @@ def _engine(
         return
     with threads(workers, progress) as engine:
         yield engine
+
+
+def _without_block_rows(where: Mapping[str, Any]) -> dict[str, Any]:
+    return {name: value for name, value in where.items() if name != "block_rows"}
+
+
+def _both(
+    as_asked: Callable[..., EstimateResults], inference: Inference, how: VarianceMade, count: int
+) -> tuple[EstimateResults, EstimateResults]:
+    """Return the effects with the propensity estimated, and with it taken as known."""
+    names = [f"effect {place}" for place in range(count)]
+    known = [f"{name}, propensity known" for name in names]
+    return as_asked(*inference.of(*names), made=how), as_asked(*inference.of(*known), made=how)
 
 
 def _ratios(plan: Plan, inference: Inference) -> dict[int, tuple[float, float]]:
@@ -232,7 +380,7 @@ class _Watch:
 
 
 def _record(
-    plan: Plan, prepared: Prepared, seconds: Mapping[str, float], told: tuple[str, ...]
+    plan: Plan, prepared: Prepared, seconds: Mapping[str, float], told: tuple[str, ...], how: VarianceMade
 ) -> dict[str, object]:
     keys = plan_keys(plan)
     text = json.dumps(keys, sort_keys=True, ensure_ascii=False)
@@ -241,7 +389,8 @@ def _record(
         "plan_sha256": hashlib.sha256(text.encode()).hexdigest(),
         "inputs": prepared.checkup.files.to_dict("records"),
         "versions": {"python": platform.python_version(), **{name: version(name) for name in PACKAGES}},
-        "seed": None,
+        "seed": dict(how.details).get("seed"),
+        "variance": how.record(),
         "seconds": dict(seconds),
         "warnings": list(told),
     }

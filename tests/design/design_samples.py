@@ -102,6 +102,7 @@ def units_of(sample):
                 parent=np.zeros(len(found), dtype=np.int64) if level == 0 else parent[first],
                 rows=np.bincount(unit, minlength=len(found)),
                 domain_rows=np.bincount(unit[sample.inside], minlength=len(found)),
+                first_rows=first,
                 population=sample.populations[first, level] if given else None,
             )
         )

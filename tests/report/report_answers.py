@@ -9,10 +9,12 @@ import pandas as pd
 import pyarrow as pa
 
 from steelyard.data.checkup import Checkup, Finding
-from steelyard.plan import Balance, Data, Design, Exposure, Outcome, Plan, Report, plan_keys
+from steelyard.keys import plan_keys
+from steelyard.plan import Balance, Data, Design, Exposure, Outcome, Plan, Report
 from steelyard.results.answer import Answer, BalanceResults, Overlap
 from steelyard.results.estimates import EstimateResults, JointTest
-from steelyard.results.weights_file import SCHEMA
+from steelyard.results.variance_made import VarianceMade
+from steelyard.results.weights_file import FIELDS
 
 EXPOSED, REFERENCE = 5200, 6300
 REGIONS = ("north", "south", "east", "west", "isles", "capital")
@@ -211,6 +213,7 @@ def made_effects(plan, widths=1.0):
             "rows": EXPOSED + REFERENCE,
             "psus": 300,
             "strata": 40,
+            "replicates": np.nan,
             "rows_exposed": EXPOSED,
             "rows_reference": REFERENCE,
             "nonzero_exposed": 900,
@@ -222,26 +225,31 @@ def made_effects(plan, widths=1.0):
     return EstimateResults(values, covariance, list(frame["outcome"]), 260.0, title="Effects", table=frame)
 
 
-def made_weights(batches=3, size=50):
-    def give():
+class MadeWeights:
+    """Weights of some batches, as a weight file gives them; ``schema`` without replicates."""
+
+    schema = pa.schema(FIELDS)
+    replicates = None
+
+    def __init__(self, batches=3, size=50):
+        self.batches, self.size = batches, size
+
+    def __call__(self):
         rng = np.random.default_rng(5)
-        for number in range(batches):
-            inside = rng.random(size) < 0.6
-            e = rng.random(size)
-            s = rng.random(size)
+        for number in range(self.batches):
+            inside = rng.random(self.size) < 0.6
+            e, s = rng.random(self.size), rng.random(self.size)
             yield pa.record_batch(
                 [
-                    pa.array(np.arange(size) + number * size),
+                    pa.array(np.arange(self.size) + number * self.size),
                     pa.array(e, mask=~inside),
                     pa.array(s),
                     pa.array(1 / e, mask=~inside),
                     pa.array(np.where(inside, s / e, 0.0)),
                     pa.array(inside),
                 ],
-                schema=SCHEMA,
+                schema=self.schema,
             )
-
-    return give
 
 
 def made_answer(minimum=10, **changes):
@@ -259,6 +267,9 @@ def made_answer(minimum=10, **changes):
         ),
         effects=made_effects(plan),
         effects_known=made_effects(plan, widths=1.25),
+        variance=VarianceMade("linearization", "linearized", 260.0, 280, 20),
+        beside=None,
+        beside_known=None,
         sensitivity=pd.DataFrame(
             {
                 "outcome": [o.name for o in plan.outcome],
@@ -285,7 +296,7 @@ def made_answer(minimum=10, **changes):
             "seconds": {"propensity": 0.07},
             "warnings": [],
         },
-        weights=made_weights(),
+        weights=MadeWeights(),
     )
     return replace(answer, **changes)
 

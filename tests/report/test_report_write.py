@@ -16,7 +16,7 @@ import pandas as pd
 import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
-from report_answers import made_answer, made_weights
+from report_answers import MadeWeights, made_answer
 
 from steelyard.errors import OutputError
 from steelyard.report import page, staging, write
@@ -85,13 +85,14 @@ def test_the_weights_are_the_batches_with_the_plan_and_its_digest(answer, tmp_pa
 def test_weights_are_written_batch_by_batch(answer, tmp_path):
     alive = []
 
-    def give():
-        for batch in made_weights(batches=4)():
-            groups = Path(next(tmp_path.glob(".steelyard-*"))) / "weights.parquet"
-            alive.append(groups.exists())
-            yield batch
+    class Watched(MadeWeights):
+        def __call__(self):
+            for batch in super().__call__():
+                groups = Path(next(tmp_path.glob(".steelyard-*"))) / "weights.parquet"
+                alive.append(groups.exists())
+                yield batch
 
-    write_answer(replace(answer, weights=give), tmp_path)
+    write_answer(replace(answer, weights=Watched(batches=4)), tmp_path)
     assert alive == [True] * 4
     assert pq.ParquetFile(tmp_path / "weights.parquet").num_row_groups == 4
 
@@ -138,11 +139,12 @@ def break_at(monkeypatch, step, error):
     monkeypatch.setattr(staging.os, "fsync", fsync)
     if step == "weights.parquet":
 
-        def give():
-            yield next(made_weights()())
-            raise error
+        class Breaking(MadeWeights):
+            def __call__(self):
+                yield next(super().__call__())
+                raise error
 
-        return {"weights": give}
+        return {"weights": Breaking()}
     return {}
 
 
@@ -241,7 +243,7 @@ def test_a_full_disk_leaves_nothing_half_written(answer, tmp_path):
         pytest.skip(f"no tmpfs can be mounted here: {mounted.stderr.decode().strip()}")
     try:
         with pytest.raises(OutputError, match="No space left") as caught:
-            write_answer(replace(answer, weights=made_weights(batches=400)), disk / "results")
+            write_answer(replace(answer, weights=MadeWeights(batches=400)), disk / "results")
         assert caught.value.mend.startswith("Free some space")
         assert list(disk.iterdir()) == []
     finally:

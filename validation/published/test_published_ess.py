@@ -55,13 +55,14 @@ class MeanInfluence:
 
 def rows_as_psus(y, w, strata, inside):
     """Design rows of one column, every row a PSU; rows not ``inside`` stay in the design only."""
-    labels, unit = np.unique(strata, return_inverse=True)
+    labels, first, unit = np.unique(strata, return_index=True, return_inverse=True)
     stage = Stage(
         columns=("stratum",),
         labels=labels.astype(str),
         parent=np.zeros(len(labels), dtype=np.int64),
         rows=np.bincount(unit),
         domain_rows=np.bincount(unit[inside], minlength=len(labels)),
+        first_rows=first,
     )
     blocks = [
         Block(part, y[part][:, np.newaxis], np.zeros(len(part)), w[part], unit[part])

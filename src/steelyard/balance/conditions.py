@@ -45,5 +45,6 @@ class ConditionsKernel:
 
     def __call__(self, rows: BalancedRows) -> Floats:
         """Return the sums of the rows."""
-        sign = np.where(rows.exposed, 1.0, -1.0)
-        return np.asarray(rows.columns.T @ (rows.sampling * sign * rows.pure))
+        weights = rows.combined if rows.plain else rows.sampling * rows.pure
+        of_exposed, of_reference = (rows.columns[members].T @ weights[members] for members in rows.groups)
+        return np.asarray(of_exposed - of_reference)

@@ -6,10 +6,11 @@ outside it still count as members of their strata and PSUs: ``Units`` remembers 
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
+import pyarrow as pa
 from numpy.typing import NDArray
 
 from steelyard.data.units import Units
@@ -51,15 +52,18 @@ class Block:
     def pieces(self, rows: int) -> Iterator[Block]:
         """Give the block in pieces of so many rows, as views: many columns of weights need short ones."""
         for first in range(0, len(self), rows):
-            run = slice(first, first + rows)
-            yield Block(
-                self.position[run],
-                self.columns[run],
-                self.exposure[run],
-                self.weight[run],
-                self.unit[run],
-                None if self.replicates is None else self.replicates[run],
-            )
+            yield self.some(slice(first, first + rows))
+
+    def some(self, rows: slice | Integers) -> Block:
+        """Return some of the block's rows: views for a slice, copies for an array of places."""
+        return Block(
+            self.position[rows],
+            self.columns[rows],
+            self.exposure[rows],
+            self.weight[rows],
+            self.unit[rows],
+            None if self.replicates is None else self.replicates[rows],
+        )
 
 
 @dataclass(frozen=True)
@@ -121,6 +125,9 @@ class Rows:
     levels : the labels (exposed, reference) as the extract spells them
     units : Units
         The sampling units of every row of the extract.
+    unit_of : callable
+        From a run of the extract that holds the design's columns to the unit of each row in the last stage, (n,).
+    replicates : columns of the extract that ``Block.replicates`` holds
     total : int
         Rows in the extract.
     exclusions : mapping
@@ -140,6 +147,8 @@ class Rows:
     total: int
     exclusions: Mapping[str, int]
     warnings: tuple[str, ...] = ()
+    unit_of: Callable[[pa.Table], Integers] | None = None
+    replicates: tuple[str, ...] = ()
 
     def __len__(self) -> int:
         return sum(len(block) for block in self.blocks)

@@ -66,6 +66,8 @@ def build_rows(extract: Extract, plan: Plan, engine: Engine, block_rows: int = 8
         terms=tuple(assembly.terms.terms),
         levels=_level_names(plan_reader, tally),
         units=coder.units,
+        unit_of=coder.encode,
+        replicates=plan_reader.replicates,
         total=tally.rows,
         exclusions={plan_reader.reasons[k]: n for k, n in sorted(tally.reasons.items())},
         warnings=tuple(_constant_warnings(plan_reader, tally)),
@@ -82,11 +84,16 @@ def _look(plan_reader: Reader, size: int, engine: Engine) -> tuple[Tally, UnitCo
     for start, table in extract.read(plan_reader.columns, size):
         chunk = plan_reader.chunk(start, table)
         tally.add(chunk)
+        replicates = plan_reader.replicate_weights(table)
+        if replicates is not None:
+            tally.replicates.add(start, replicates, chunk.weight)
         collector.add(table, chunk.kept)
         for name, found in levels.items():
             found |= levels_of(table.column(name), plan.data.missing.get(name, ()))
         engine.progress("reading: look", min(start + size, extract.rows), extract.rows)
     tally.refuse_bad_weights()
+    if plan_reader.replicates:
+        tally.replicates.refuse_unfit(plan.design.weight)
     return tally, collector.finish(), {name: tuple(sorted(found)) for name, found in levels.items()}
 
 
@@ -283,6 +290,9 @@ def _blocks(
         if unusable:
             return [], unusable
         unit = assembly.coder.encode(table)
+        replicates = plan_reader.replicate_weights(table)
+        if replicates is not None:
+            replicates = replicates[kept]
         cuts = np.searchsorted(kept, np.arange(0, table.num_rows + block_rows, block_rows))
         blocks = [
             Block(
@@ -291,6 +301,7 @@ def _blocks(
                 exposure=chunk.exposure[kept[a:b]],
                 weight=chunk.weight[kept[a:b]],
                 unit=unit[kept[a:b]],
+                replicates=None if replicates is None else replicates[a:b].copy(),
             )
             for a, b in pairwise(cuts)
             if b > a

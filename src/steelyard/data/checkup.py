@@ -103,6 +103,7 @@ def conclude(
         *(Finding("note", note, "Check that this is how the sample was numbered.") for note in notes),
         *_design_findings(reader, strata, units, exposed, reference),
         *_weight_findings(tally),
+        *_replicate_findings(reader, tally),
         *_missing_findings(missing),
         *_size_findings(tally, rows, exposed, reference),
     )
@@ -182,6 +183,8 @@ def _facts(
         for number, stage in enumerate(units.stages[2:], start=2)
     ]
     facts.append(("PSUs minus strata in the domain", degrees_of_freedom(units)))
+    if tally.reader.replicates:
+        facts.append(("replicate weights", len(tally.reader.replicates)))
     return pd.DataFrame(facts, columns=["fact", "value"])
 
 
@@ -293,6 +296,25 @@ def _weight_findings(tally: Tally) -> list[Finding]:
             )
         )
     return found
+
+
+def _replicate_findings(reader: Reader, tally: Tally) -> list[Finding]:
+    supplied = reader.plan.design.replicates
+    if supplied is None:
+        return []
+    frame = tally.replicates.frame()
+    low, high = frame["share_of_full"].min(), frame["share_of_full"].max()
+    found = [
+        Finding(
+            "note",
+            f"The extract has {len(frame)} replicate weights ({supplied.method}), {frame['column'].iloc[0]} to "
+            f"{frame['column'].iloc[-1]}; they add up to {low:.3f} to {high:.3f} times the full weights.",
+            'They are used where variance.method is "supplied".',
+        )
+    ]
+    return found + [
+        Finding("warning", message, mend) for message, mend in tally.replicates.warnings(supplied)
+    ]
 
 
 def _missing_findings(missing: pd.DataFrame) -> list[Finding]:

@@ -42,6 +42,7 @@ class UnitCollector:
         self.missing: dict[str, int] = {}
         self.seen: list[pd.DataFrame] = []
         self.held = 0
+        self.rows = 0
         self.limit = SEEN_BEFORE_COMPACTING
 
     def add(self, table: pa.Table, in_domain: NDArray[np.bool_]) -> None:
@@ -61,6 +62,8 @@ class UnitCollector:
             columns[f"population{place}"] = values
         frame = pd.DataFrame({**columns, "domain_rows": in_domain.astype(np.int64)})
         frame["rows"] = 1
+        frame["first_row"] = np.arange(self.rows, self.rows + len(frame))
+        self.rows += len(frame)
         self.seen.append(_distinct(frame))
         self.held += len(self.seen[-1])
         if self.held > self.limit:
@@ -178,6 +181,7 @@ def _coder(design: Design, ids: tuple[str, ...], levels: list[pa.Array], frame: 
                 parent=np.zeros(size, dtype=np.int64) if number == 0 else by_stage[number - 1][first],
                 rows=_sums(of_stage, frame["rows"].to_numpy(), size),
                 domain_rows=_sums(of_stage, frame["domain_rows"].to_numpy(), size),
+                first_rows=_smallest(of_stage, frame["first_row"].to_numpy(), size),
                 population=_population(design, number, of_stage, frame, labels, size),
             )
         )
@@ -260,11 +264,21 @@ def _sums(code: Integers, values: Integers, size: int) -> Integers:
     return np.bincount(code, values.astype(np.float64), size).astype(np.int64)
 
 
+def _smallest(code: Integers, values: Integers, size: int) -> Integers:
+    smallest = np.full(size, np.iinfo(np.int64).max)
+    np.minimum.at(smallest, code, values.astype(np.int64))
+    return smallest
+
+
+# What is said of each combination of ids, and how that adds up.
+COUNTED = {"rows": "sum", "domain_rows": "sum", "first_row": "min"}
+
+
 def _distinct(frame: pd.DataFrame) -> pd.DataFrame:
-    by = [name for name in frame.columns if name not in {"rows", "domain_rows"}]
+    by = [name for name in frame.columns if name not in COUNTED]
     if not by:
-        return frame[["rows", "domain_rows"]].sum().to_frame().T
-    return frame.groupby(by, as_index=False, sort=False, dropna=False)[["rows", "domain_rows"]].sum()
+        return frame.agg(COUNTED).to_frame().T
+    return frame.groupby(by, as_index=False, sort=False, dropna=False)[list(COUNTED)].agg(COUNTED)
 
 
 def _encoded(name: str, column: pa.ChunkedArray) -> tuple[Integers, pa.Array]:

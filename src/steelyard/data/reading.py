@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from steelyard.data.expression import Expression, parse_expression
 from steelyard.data.formula import Formula, parse_formula
+from steelyard.data.replicate_weights import replicate_columns, replicates_of
 from steelyard.data.source import Extract
 from steelyard.data.values import (
     Values,
@@ -73,6 +74,7 @@ class Reader:
     domain : Expression
     complete : columns that must not be missing, in the order in which they are looked at
     reasons : why a row may be left out, in the order in which reasons are looked at
+    replicates : columns of the replicate weights that came with the extract
     """
 
     plan: Plan
@@ -82,6 +84,7 @@ class Reader:
     domain: Expression
     complete: tuple[str, ...]
     reasons: tuple[str, ...]
+    replicates: tuple[str, ...] = ()
 
     @property
     def exposure(self) -> str:
@@ -98,11 +101,24 @@ class Reader:
             *design.strata,
             *design.clusters,
             *design.population,
+            *self.replicates,
             self.exposure,
             *self.domain.columns,
             *self.complete,
         )
         return tuple(dict.fromkeys(named))
+
+    @property
+    def design_columns(self) -> tuple[str, ...]:
+        """The columns of the weight and of the sampling units."""
+        design = self.plan.design
+        return tuple(dict.fromkeys((design.weight, *design.strata, *design.clusters, *self.replicates)))
+
+    def replicate_weights(self, table: pa.Table) -> Floats | NDArray[np.float32] | None:
+        """Return the replicate weights of a run, (n, R); None where the extract has none."""
+        if not self.replicates:
+            return None
+        return replicates_of(table, self.replicates, self.plan.data.missing)
 
     @property
     def categories(self) -> tuple[str, ...]:
@@ -166,6 +182,8 @@ def reader(extract: Extract, plan: Plan) -> Reader:
                 f'The design column "{name}" holds {"text" if kinds[name] == "category" else kinds[name]}.',
                 mend="It must hold numbers.",
             )
+    supplied = design.replicates
+    replicates = () if supplied is None else replicate_columns(extract, supplied, design.weight)
     refuse_bad_codes(extract, plan.data.missing)
     formula = parse_formula(plan.exposure.formula, kinds, sided=True)
     domain = parse_expression(plan.data.domain, kinds)
@@ -194,7 +212,7 @@ def reader(extract: Extract, plan: Plan) -> Reader:
         f"exposure {formula.response} at neither level",
         *(f"{name} missing" for name in complete),
     )
-    return Reader(plan, extract, formula, covariates, domain, tuple(complete), reasons)
+    return Reader(plan, extract, formula, covariates, domain, tuple(complete), reasons, replicates)
 
 
 def _equal(values: Values, level: object) -> Bools:

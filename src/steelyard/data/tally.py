@@ -10,6 +10,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from steelyard.data.reading import Chunk, Reader, exposure_counts
+from steelyard.data.replicate_weights import ReplicateTally
 from steelyard.data.values import Values, is_missing
 from steelyard.errors import DesignError
 
@@ -59,6 +60,7 @@ class Tally:
         Column -> smallest and largest number in the domain.
     texts : mapping
         Category column -> levels met in the domain; no more are looked for once there are two.
+    replicates : ReplicateTally
     beyond : columns with a number other than 0 and 1 in the domain
     """
 
@@ -78,6 +80,10 @@ class Tally:
     beyond: set[str] = field(default_factory=set)
     bad_weights: int = 0
     bad_positions: list[int] = field(default_factory=list)
+    replicates: ReplicateTally = field(init=False)
+
+    def __post_init__(self) -> None:
+        self.replicates = ReplicateTally(self.reader.replicates)
 
     def add(self, chunk: Chunk) -> None:
         """Take in a chunk."""

@@ -27,6 +27,8 @@ class Stage:
         Rows of the extract in the unit, in the domain or not.
     domain_rows : (U,) int64
         Those of them that are in blocks.
+    first_rows : (U,) int64
+        The first row of the extract in the unit.
     population : (U,) float64 or None
         How many units of the *next* stage (rows, below the last stage) the population has within
         this unit; None where the plan gives no such column.
@@ -37,6 +39,7 @@ class Stage:
     parent: NDArray[np.int64]
     rows: NDArray[np.int64]
     domain_rows: NDArray[np.int64]
+    first_rows: NDArray[np.int64]
     population: NDArray[np.float64] | None = None
 
     def __len__(self) -> int:

@@ -16,11 +16,12 @@ from numpy.typing import NDArray
 
 from steelyard.data.blocks import Block
 from steelyard.data.passes import Engine
+from steelyard.data.unit_totals import UnitTotals
 from steelyard.estimate.linear import Factored
 from steelyard.estimate.moments import Moments
 from steelyard.estimate.newton import Newton
 from steelyard.estimate.regression import Regression, Scale, model_scale
-from steelyard.estimate.together import solve_replicates
+from steelyard.estimate.together import solve_replicates, sums_by_unit
 from steelyard.estimate.weights import WeightColumns
 
 Floats = NDArray[np.float64]
@@ -80,7 +81,8 @@ def fit(regression: Regression, moments: Moments, engine: Engine, blocks: Sequen
     solution = newton.under(0).solve()
     information = newton.under(0).observed_information(solution)
     aliased = tuple(n for n, kept in zip(regression.names, information.keep, strict=True) if not kept)
-    scaled, failed = solve_replicates(newton, solution.b, information)
+    sums = sums_by_unit(newton, solution.b) if regression.weights.count > 1 else None
+    scaled, failed = solve_replicates(newton, solution.b, information, sums)
     return Fit(regression, newton.scale, scaled, information, aliased, solution.steps, failed)
 
 
@@ -89,13 +91,25 @@ def refit(
     weights: WeightColumns,
     engine: Engine,
     blocks: Sequence[Block],
+    sums: UnitTotals | None = None,
     unsolvable: Mapping[int, str] | None = None,
 ) -> Fit:
     """Return the fit under other columns of weights, whose column 0 is that of ``full``.
 
-    ``unsolvable`` names columns whose weights are not there, and why; they are passed on as failed.
+    ``sums`` are those of :func:`replicate_sums`; ``unsolvable`` names columns whose weights are not there, and
+    why: they are passed on as failed.
     """
-    regression = replace(full.regression, weights=weights)
-    newton = Newton(regression, full.scale, engine, blocks)
-    scaled, failed = solve_replicates(newton, full.scaled[:, 0], full.information, unsolvable)
-    return replace(full, regression=regression, scaled=scaled, failed=failed)
+    newton = _under(full, weights, engine, blocks)
+    scaled, failed = solve_replicates(newton, full.scaled[:, 0], full.information, sums, unsolvable)
+    return replace(full, regression=newton.regression, scaled=scaled, failed=failed)
+
+
+def replicate_sums(
+    full: Fit, weights: WeightColumns, engine: Engine, blocks: Sequence[Block]
+) -> UnitTotals | None:
+    """Return what every refit under columns like these starts from; None where there is no such short cut."""
+    return sums_by_unit(_under(full, weights, engine, blocks), full.scaled[:, 0])
+
+
+def _under(full: Fit, weights: WeightColumns, engine: Engine, blocks: Sequence[Block]) -> Newton:
+    return Newton(replace(full.regression, weights=weights), full.scale, engine, blocks)

@@ -27,6 +27,7 @@ _LINKS = {
     "logit": families.links.Logit,
     "probit": families.links.Probit,
 }
+LARGEST_ODDS = 1e300
 _CANONICAL = {("gaussian", "identity"), ("binomial", "logit"), ("poisson", "log")}
 
 
@@ -59,6 +60,20 @@ class Likelihood:
             return _expit(eta)
         return np.asarray(_link(self.link).inverse(eta))
 
+    def mean_and_complement(self, eta: Floats) -> tuple[Floats, Floats]:
+        """Return ``g^-1(eta)`` and ``1 - g^-1(eta)``, each with all its digits, for a logit or probit link."""
+        if self.link == "logit":
+            with np.errstate(over="ignore"):
+                odds_against = np.exp(np.negative(eta, dtype=np.float64))
+            # A finite number keeps the complement from being infinity times zero.
+            np.minimum(odds_against, LARGEST_ODDS, out=odds_against)
+            mean = 1 + odds_against
+            np.reciprocal(mean, out=mean)
+            odds_against *= mean
+            return mean, odds_against
+        # The link is symmetric, so 1 - e keeps its digits as the mean of -eta.
+        return self.mean(eta), self.mean(-eta)
+
     def mean_slope(self, eta: Floats) -> Floats:
         """Return ``d mean / d eta``, of the shape of ``eta``."""
         if self.link == "logit":
@@ -73,8 +88,10 @@ class Likelihood:
         """Return ``g'(mean)``."""
         return np.asarray(_link(self.link).deriv(mean))
 
-    def score(self, y: Floats, eta: Floats) -> Floats:
-        """Return the slope of the row's log-likelihood in ``eta``."""
+    def score(self, y: Floats, eta: Floats, out: Floats | None = None) -> Floats:
+        """Return the slope of the row's log-likelihood in ``eta``; ``out``, which may be ``eta``, is room for it."""
+        if self.link == "logit" and out is not None:
+            return np.subtract(y, _expit(eta, out), out=out)
         mu = self.mean(eta)
         if self.canonical:
             return np.asarray(y - mu)
@@ -120,9 +137,9 @@ class Likelihood:
         return np.asarray(self._family.variance(mu))
 
 
-def _expit(eta: Floats) -> Floats:
+def _expit(eta: Floats, out: Floats | None = None) -> Floats:
     """Return ``1 / (1 + exp(-eta))``: numpy's exponential does several rows at a time, scipy's expit does not."""
-    out = np.negative(eta, dtype=np.float64)
+    out = np.negative(eta, out=out, dtype=np.float64)
     with np.errstate(over="ignore"):
         np.exp(out, out=out)
     out += 1

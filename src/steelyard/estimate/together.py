@@ -26,17 +26,21 @@ Integers = NDArray[np.int64]
 
 SHARED_STEPS = 10
 # Largest error, in coefficients of unit-spread columns, that the steps left to take may still correct.
-ERROR_TOLERANCE = 1e-10
+ERROR_TOLERANCE = 1e-9
 # A column whose steps shrink by less than this is better served by steps of its own.
 SLOWEST = 0.5
 # Numbers that the sums by unit may take (128 MB): beyond, columns share the full sample's information.
 MOST_SUMS = 16_000_000
 # So many rows at a time keep all columns' work in cache.
-PIECE_ROWS = 1024
+PIECE_ROWS = 2048
 
 
 def solve_replicates(
-    newton: Newton, b: Floats, information: Factored, unsolvable: Mapping[int, str] | None = None
+    newton: Newton,
+    b: Floats,
+    information: Factored,
+    sums: UnitTotals | None = None,
+    unsolvable: Mapping[int, str] | None = None,
 ) -> tuple[Floats, dict[int, str]]:
     """Return scaled coefficients for every column of weights, (p, K), and why columns have none.
 
@@ -46,6 +50,8 @@ def solve_replicates(
         The solution of column 0, where every other column starts.
     information : Factored
         The full sample's, at ``b``.
+    sums : UnitTotals or None
+        Those of :func:`sums_by_unit`, for weights that are multiplied unit by unit.
     unsolvable : mapping
         Columns whose weights are not there, and why: they are passed on as failed.
 
@@ -64,9 +70,8 @@ def solve_replicates(
     moving = np.array([k for k in range(1, count) if k not in failed], dtype=np.int64)
     inverses, own = np.repeat(information.inverse()[np.newaxis], len(moving), axis=0), []
     sizes = np.full(len(moving), np.inf)
-    units = multiplied_by_unit(newton.regression.weights)
-    if len(moving) and units is not None and _few_sums(units, len(b)):
-        score, theirs = _from_units(newton, b, units, moving)
+    if len(moving) and sums is not None:
+        score, theirs = _multiplied(newton, sums, moving)
         inverses, lost = _inverses(theirs, information.keep)
         step = np.einsum("kij,jk->ik", inverses, score)
         coefficients[:, moving] += step
@@ -89,7 +94,7 @@ def solve_replicates(
         coefficients[:, moving[~slow]] += step[:, ~slow]
         own += moving[slow].tolist()
         settled = (rate < SLOWEST) & (step_sizes * rate / (1 - rate) < ERROR_TOLERANCE) & np.isfinite(sizes)
-        going = ~slow & ~settled & (step_sizes > ERROR_TOLERANCE / 100)
+        going = ~slow & ~settled & (step_sizes > ERROR_TOLERANCE / 1000)
         moving, inverses, sizes = moving[going], inverses[going], step_sizes[going]
     for column in sorted({*own, *moving.tolist()}):
         try:
@@ -105,17 +110,25 @@ def _sizes(step: Floats, scale: Scale) -> Floats:
     return np.asarray(np.max(np.abs(step) * scale.unit[:, np.newaxis], axis=0, initial=0))
 
 
-def _few_sums(units: UnitWeights, size: int) -> bool:
-    return units.units * size * (size + 1) <= MOST_SUMS
+def sums_by_unit(newton: Newton, b: Floats) -> UnitTotals | None:
+    """Return the sums by unit of the rows' scores and informations at ``b``, under the full sample's weights.
 
-
-def _from_units(newton: Newton, b: Floats, units: UnitWeights, moving: Integers) -> tuple[Floats, Floats]:
-    """Return the scores (p, M) and informations (M, p, p) of the moving columns at ``b``, from sums by unit."""
+    None where the weights are not multiplied unit by unit, or the units are too many to hold sums of.
+    """
+    units = multiplied_by_unit(newton.regression.weights)
+    if units is None or units.units * len(b) * (len(b) + 1) > MOST_SUMS:
+        return None
     kernel = _UnitKernel(newton.regression.under([0]), newton.scale, b, units)
     what = f"{newton.regression.what}: sums by unit"
-    totals = newton.engine.run(what, newton.blocks, kernel, UnitTotals.merged)
-    multiplied = totals.values.T @ units.multipliers(totals.unit)[:, moving]
-    size = len(b)
+    return newton.engine.run(what, newton.blocks, kernel, UnitTotals.merged)
+
+
+def _multiplied(newton: Newton, sums: UnitTotals, moving: Integers) -> tuple[Floats, Floats]:
+    """Return the scores (p, M) and informations (M, p, p) of the moving columns, from sums by unit."""
+    units = multiplied_by_unit(newton.regression.weights)
+    assert units is not None
+    multiplied = sums.values.T @ units.multipliers(sums.unit)[:, moving]
+    size = len(newton.regression.names)
     return multiplied[:size], multiplied[size:].T.reshape(-1, size, size)
 
 
@@ -195,12 +208,20 @@ class _SharedKernel:
 
     def __call__(self, block: Block) -> Floats:
         score = np.zeros_like(self.coefficients)
+        # Room for two arrays of rows by columns: asking the system for it piece by piece costs as much as the sums.
+        room = np.empty((2, min(len(block), PIECE_ROWS), score.shape[1]))
         for piece in block.pieces(PIECE_ROWS):
+            eta, weights = room[0, : len(piece)], room[1, : len(piece)]
             x = self.scale(self.regression.columns(piece))
-            w = self.regression.weights(piece)
+            w = self.regression.weights(piece, out=weights)
             y = self.regression.response(piece)[:, np.newaxis]
             with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
-                of_rows = self.regression.likelihood.score(y, x @ self.coefficients)
-                of_rows = np.where(w != 0, w * of_rows, 0) if not np.isfinite(of_rows).all() else w * of_rows
-                score += x.T @ of_rows
+                of_rows = self.regression.likelihood.score(
+                    y, np.matmul(x, self.coefficients, out=eta), out=eta
+                )
+                part = x.T @ np.multiply(w, of_rows, out=of_rows)
+                if not np.isfinite(part).all():
+                    # A row without weight may have a mean the family does not allow.
+                    part = x.T @ np.where(w != 0, of_rows, 0)
+            score += part
         return score

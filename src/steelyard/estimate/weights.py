@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Protocol, runtime_checkable
+from typing import Protocol, cast
 
 import numpy as np
 from numpy.typing import NDArray
@@ -23,8 +23,8 @@ class WeightColumns(Protocol):
         """How many columns there are, K."""
         ...
 
-    def __call__(self, block: Block) -> Floats:
-        """Return the block's (n, K) weights."""
+    def __call__(self, block: Block, out: Floats | None = None) -> Floats:
+        """Return the block's (n, K) weights; ``out`` (n, K) is room for them that may be used."""
         ...
 
     def only(self, columns: Sequence[int] | Integers) -> WeightColumns:
@@ -32,7 +32,6 @@ class WeightColumns(Protocol):
         ...
 
 
-@runtime_checkable
 class UnitWeights(Protocol):
     """Weight columns that multiply a row's own weight by a multiplier of its unit.
 
@@ -59,7 +58,7 @@ class SamplingWeights:
 
     count: int = 1
 
-    def __call__(self, block: Block) -> Floats:
+    def __call__(self, block: Block, out: Floats | None = None) -> Floats:
         """Return the block's sampling weights as one column."""
         return block.weight[:, np.newaxis]
 
@@ -82,9 +81,9 @@ class UnweightedFit:
         """How many columns there are."""
         return self.columns.count
 
-    def __call__(self, block: Block) -> Floats:
+    def __call__(self, block: Block, out: Floats | None = None) -> Floats:
         """Return the block's (n, K) multipliers."""
-        columns, weight = self.columns(block), block.weight[:, np.newaxis]
+        columns, weight = self.columns(block, out), block.weight[:, np.newaxis]
         return np.divide(columns, weight, out=np.zeros_like(columns), where=weight > 0)
 
     def only(self, columns: Sequence[int] | Integers) -> UnweightedFit:
@@ -95,7 +94,8 @@ class UnweightedFit:
 def multiplied_by_unit(weights: WeightColumns) -> UnitWeights | None:
     """Return what multiplies the rows' own weights unit by unit; None where the columns are not of that kind."""
     columns = weights.columns if isinstance(weights, UnweightedFit) else weights
-    return columns if isinstance(columns, UnitWeights) else None
+    # Asked for every piece of a block: isinstance() of a protocol would cost more than the sums it saves.
+    return cast(UnitWeights, columns) if hasattr(columns, "multipliers") else None
 
 
 @dataclass(frozen=True)

@@ -102,7 +102,7 @@ class Balancing:
         """Return the block with everything that weighting makes of it, computed when asked for."""
         return BalancedRows(self, block)
 
-    def __call__(self, block: Block) -> Floats:
+    def __call__(self, block: Block, out: Floats | None = None) -> Floats:
         """Return the block's combined weights (n, K): a ``WeightColumns``."""
         return self.rows(block).combined
 
@@ -147,22 +147,31 @@ class BalancedRows:
         return np.asarray(self.block.exposure[:, np.newaxis] == 1)
 
     @cached_property
-    def groups(self) -> tuple[Integers, Integers]:
-        """The places of the exposed and of the reference rows."""
+    def groups(self) -> tuple[Integers | slice, Integers | slice]:
+        """The places of the exposed and of the reference rows; a slice where one group is all there is."""
         is_exposed = self.block.exposure == 1
+        if is_exposed.all():
+            return slice(None), slice(0, 0)
+        if not is_exposed.any():
+            return slice(0, 0), slice(None)
         return np.flatnonzero(is_exposed), np.flatnonzero(~is_exposed)
 
     @cached_property
     def pure(self) -> Floats:
         """The estimand's weight of the propensity alone, before stabilizing and trimming; (n, K)."""
-        rule, eta, mean = self.balancing_rule, self.eta, self.plan.fit.regression.likelihood.mean
+        rule, eta, likelihood = self.balancing_rule, self.eta, self.plan.fit.regression.likelihood
         pure = np.empty_like(eta)
         with np.errstate(divide="ignore", over="ignore", invalid="ignore"):
             for members, of_group in zip(self.groups, (rule.exposed, rule.reference), strict=True):
-                # Both links are symmetric, so 1 - e keeps its digits as the mean of -eta.
-                here = eta[members]
-                pure[members] = of_group(mean(here), mean(-here))
+                if isinstance(members, slice) and members == slice(None):
+                    return of_group(*likelihood.mean_and_complement(eta))
+                pure[members] = of_group(*likelihood.mean_and_complement(eta[members]))
         return pure
+
+    @cached_property
+    def plain(self) -> bool:
+        """Whether the balancing weights are the estimand's alone, neither stabilized nor trimmed."""
+        return self.plan.share is None and self.plan.cap is None and self.plan.propensity_range is None
 
     @cached_property
     def pure_slope(self) -> Floats:

@@ -14,7 +14,7 @@ from steelyard.data.unit_totals import Product
 from steelyard.estimate.estimates import Estimates, Weighing
 from steelyard.exposure.balancing import BalancedRows, Balancing
 from steelyard.exposure.one_pass import sums_in_one_pass
-from steelyard.exposure.weighing import weights
+from steelyard.exposure.weighing import weighted_sums
 
 Floats = NDArray[np.float64]
 
@@ -143,7 +143,6 @@ class SumsKernel:
 
     def __call__(self, rows: BalancedRows) -> tuple[Floats, Floats]:
         """Return the sums of the rows."""
-        under, z = weights(rows, self.weighing), self.columns(rows.block)
-        by_group = [under[members] for members in rows.groups]
-        sums = [z[members].T @ w for members, w in zip(rows.groups, by_group, strict=True)]
-        return np.stack(sums), np.stack([w.sum(axis=0) for w in by_group])
+        z = self.columns(rows.block)
+        sums = [weighted_sums(rows, self.weighing, z, members) for members in rows.groups]
+        return np.stack([of_values for of_values, _ in sums]), np.stack([of_ones for _, of_ones in sums])

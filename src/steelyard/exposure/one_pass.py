@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -15,7 +15,7 @@ from steelyard.exposure.balancing import BalancedRows, Balancing
 # From the balanced rows of a block to a part that adds up. Picklable.
 RowsKernel = Callable[[BalancedRows], Any]
 # With many columns of weights, so many rows at a time keep the work in cache.
-PIECE_ROWS = 1024
+PIECE_ROWS = 4096
 FEW_COLUMNS = 4
 
 
@@ -37,9 +37,8 @@ class _SeveralKernel:
     kernels: dict[str, RowsKernel]
 
     def __call__(self, block: Block) -> dict[str, Any]:
-        rows = len(block) if self.balancing.count <= FEW_COLUMNS else PIECE_ROWS
         total: dict[str, Any] | None = None
-        for piece in block.pieces(rows):
+        for piece in self._pieces(block):
             # A column of weights that has no propensity is NaN, and so is what it makes.
             with np.errstate(invalid="ignore", over="ignore"):
                 balanced = self.balancing.rows(piece)
@@ -47,3 +46,14 @@ class _SeveralKernel:
             total = part if total is None else add(total, part)
         assert total is not None
         return total
+
+    def _pieces(self, block: Block) -> Iterator[Block]:
+        """Give the block whole, or, for many columns, short pieces of one group: no array by columns is indexed."""
+        if self.balancing.fit.scaled.shape[1] <= FEW_COLUMNS:
+            yield block
+            return
+        for piece in block.pieces(PIECE_ROWS):
+            is_exposed = piece.exposure == 1
+            for members in (np.flatnonzero(is_exposed), np.flatnonzero(~is_exposed)):
+                if len(members):
+                    yield piece.some(members)

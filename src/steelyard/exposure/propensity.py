@@ -13,8 +13,9 @@ from steelyard.data.passes import Engine
 from steelyard.data.unit_totals import Product
 from steelyard.errors import OverlapError
 from steelyard.estimate.estimates import Estimates
-from steelyard.estimate.fit import Fit, fit, refit
+from steelyard.estimate.fit import Fit, fit
 from steelyard.estimate.likelihood import Likelihood
+from steelyard.estimate.quantiles import weighted_quantile
 from steelyard.estimate.regression import Regression, model_moments
 from steelyard.estimate.separation import refuse_separating_columns
 from steelyard.estimate.weights import UnweightedFit, WeightColumns
@@ -47,7 +48,7 @@ def fit_propensity(rows: Rows, exposure: Exposure, sampling: WeightColumns, engi
         names=model.names,
         columns=model.of,
         response=exposed,
-        weights=sampling if exposure.weighted else UnweightedFit(sampling),
+        weights=fit_weights(exposure, sampling),
         likelihood=Likelihood("binomial", exposure.link),
         intercept=model.intercept,
         what="exposure model",
@@ -77,11 +78,9 @@ def no_products(rows: BalancedRows) -> list[Product]:
     return []
 
 
-def refit_propensity(
-    full: Fit, exposure: Exposure, sampling: WeightColumns, engine: Engine, blocks: Sequence[Block]
-) -> Fit:
-    """Fit the propensity under other columns of weights, whose column 0 is that of ``full``."""
-    return refit(full, sampling if exposure.weighted else UnweightedFit(sampling), engine, blocks)
+def fit_weights(exposure: Exposure, sampling: WeightColumns) -> WeightColumns:
+    """Return the weights that the propensity is fitted under: the sampling weights, or what replicates make of 1."""
+    return sampling if exposure.weighted else UnweightedFit(sampling)
 
 
 def balancing(
@@ -199,18 +198,6 @@ def _caps(made: Balancing, quantile: float, engine: Engine, blocks: Sequence[Blo
         combined = np.concatenate([part[0] for part in parts])
         multiplier = np.concatenate([part[1] for part in parts])
         for j, column in enumerate(some):
-            caps[column] = weighted_quantile(combined[:, j], multiplier[:, j], quantile)
+            carries = combined[:, j] > 0
+            caps[column] = weighted_quantile(combined[carries, j], multiplier[carries, j], quantile)
     return caps
-
-
-def weighted_quantile(values: Floats, weight: Floats, quantile: float) -> float:
-    """Return the smallest positive value at which the cumulated weight reaches ``quantile`` of the total."""
-    counted = (values > 0) & (weight > 0)
-    if not counted.any():
-        return float("nan")
-    values, weight = values[counted], weight[counted]
-    order = np.argsort(values, kind="stable")
-    cumulated = np.cumsum(weight[order])
-    # The slack keeps a quantile that falls on a step from depending on rounding of the sum.
-    place = int(np.searchsorted(cumulated, quantile * cumulated[-1] * (1 - 1e-12)))
-    return float(values[order[min(place, len(order) - 1)]])

@@ -71,7 +71,7 @@ class OutcomeRegression:
 
     def under(self, balancing: Balancing, engine: Engine, blocks: Sequence[Block]) -> OutcomeRegression:
         """Return the model under other columns of combined weights, whose column 0 is the one it has."""
-        return replace(self, fit=refit(self.fit, balancing, engine, blocks, balancing.failed))
+        return replace(self, fit=refit(self.fit, balancing, engine, blocks, unsolvable=balancing.failed))
 
 
 @dataclass(frozen=True)

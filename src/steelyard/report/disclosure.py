@@ -27,7 +27,7 @@ from steelyard.report.released_counts import (
 from steelyard.report.released_texts import TextRules
 from steelyard.report.suppression import HIDDEN, Mask, is_hidden, small, under, with_complements
 from steelyard.results.answer import Answer
-from steelyard.results.estimates import JointTest
+from steelyard.results.estimates import EstimateResults, JointTest
 
 EXPOSED_CELLS = ("mean_exposed_before", "mean_exposed_after")
 REFERENCE_CELLS = ("mean_reference_before", "mean_reference_after")
@@ -45,7 +45,7 @@ BALANCE_COLUMNS = (
 )
 EFFECT_COLUMNS = (
     *("outcome", "measure", "estimand", "domain", "exposed", "reference", "estimate", "std_error"),
-    *("ci_low", "ci_high", "df", "statistic", "p_value", "variance", "rows", "psus", "strata"),
+    *("ci_low", "ci_high", "df", "statistic", "p_value", "variance", "rows", "psus", "strata", "replicates"),
 )
 EFFECT_CELLS = (
     "exposed",
@@ -89,6 +89,8 @@ class Released:
         None where there is none, or it is hidden.
     effects, effects_known : frames
         The columns of effects.csv.
+    beside, beside_known : frames
+        The same with the linearized variance, where it stands beside that of replicates; else without rows.
     sensitivity : frame
     warnings, notes : texts
         ``notes`` say what was hidden.
@@ -114,9 +116,16 @@ class Released:
     over_identification: JointTest | None
     effects: pd.DataFrame
     effects_known: pd.DataFrame
+    beside: pd.DataFrame
+    beside_known: pd.DataFrame
     sensitivity: pd.DataFrame
     warnings: tuple[str, ...]
     notes: tuple[str, ...]
+
+    @property
+    def every_effect(self) -> pd.DataFrame:
+        """The effects under the plan's variance, then under the one beside it: effects.csv."""
+        return pd.concat([self.effects, self.beside], ignore_index=True) if len(self.beside) else self.effects
 
     @property
     def under(self) -> str:
@@ -189,6 +198,8 @@ def release(answer: Answer) -> Released:
         over_identification=None if groups_hidden else answer.balance.over_identification,
         effects=_effects(answer.effects.table, groups_hidden, inside, minimum),
         effects_known=_effects(answer.effects_known.table, groups_hidden, inside, minimum),
+        beside=_beside(answer.beside, groups_hidden, inside, minimum),
+        beside_known=_beside(answer.beside_known, groups_hidden, inside, minimum),
         sensitivity=_covered(answer.sensitivity, groups_hidden, SENSITIVITY_CELLS, text),
         warnings=tuple(texts.released(warning) for warning in answer.warnings),
         notes=_notes(minimum, groups_hidden, int(hidden_rows.sum()), strata),
@@ -252,6 +263,12 @@ def _effects(table: pd.DataFrame, groups_hidden: bool, inside: int, minimum: int
     # The effect and one mean give the other, so both means go.
     released = _put(released, few, ("exposed", "reference"), under(minimum))
     return _covered(released[list(EFFECT_COLUMNS)], inside < minimum, ("rows",), under(minimum))
+
+
+def _beside(results: EstimateResults | None, groups_hidden: bool, inside: int, minimum: int) -> pd.DataFrame:
+    if results is None:
+        return pd.DataFrame(columns=list(EFFECT_COLUMNS))
+    return _effects(results.table, groups_hidden, inside, minimum)
 
 
 def _covered(table: pd.DataFrame, hide: bool, cells: tuple[str, ...], text: str) -> pd.DataFrame:

@@ -12,11 +12,16 @@ REFERENCES = {
     "Binder 1983": "Binder, D. A. (1983). On the variances of asymptotically normal estimators from complex "
     "surveys. International Statistical Review, 51(3), 279–292.",
     "Cochran 1977": "Cochran, W. G. (1977). Sampling Techniques (3rd ed.). New York: Wiley.",
+    "Fay & Train 1995": "Fay, R. E. & Train, G. F. (1995). Aspects of survey and model-based postcensal estimation "
+    "of income and poverty characteristics for states and counties. Proceedings of the Section on Government "
+    "Statistics, American Statistical Association, 154–159.",
     "Hájek 1971": "Hájek, J. (1971). Comment on “An essay on the logical foundations of survey sampling, part "
     "one” by D. Basu. In V. P. Godambe & D. A. Sprott (Eds.), Foundations of Statistical Inference. Toronto: "
     "Holt, Rinehart and Winston.",
     "Imai & Ratkovic 2014": "Imai, K. & Ratkovic, M. (2014). Covariate balancing propensity score. Journal of "
     "the Royal Statistical Society B, 76(1), 243–263.",
+    "Judkins 1990": "Judkins, D. R. (1990). Fay's method for variance estimation. Journal of Official Statistics, "
+    "6(3), 223–239.",
     "Kish 1965": "Kish, L. (1965). Survey Sampling. New York: Wiley.",
     "Korn & Graubard 1990": "Korn, E. L. & Graubard, B. I. (1990). Simultaneous testing of regression "
     "coefficients with complex survey data: use of Bonferroni t statistics. The American Statistician, 44(4), "
@@ -26,6 +31,10 @@ REFERENCES = {
     "Lunceford & Davidian 2004": "Lunceford, J. K. & Davidian, M. (2004). Stratification and weighting via the "
     "propensity score in estimation of causal treatment effects: a comparative study. Statistics in Medicine, "
     "23(19), 2937–2960.",
+    "McCarthy 1969": "McCarthy, P. J. (1969). Pseudo-replication: half samples. Review of the International "
+    "Statistical Institute, 37(3), 239–264.",
+    "Rao, Wu & Yue 1992": "Rao, J. N. K., Wu, C. F. J. & Yue, K. (1992). Some recent work on resampling methods for "
+    "complex surveys. Survey Methodology, 18(2), 209–217.",
     "VanderWeele & Ding 2017": "VanderWeele, T. J. & Ding, P. (2017). Sensitivity analysis in observational "
     "research: introducing the E-value. Annals of Internal Medicine, 167(4), 268–274.",
     "Wolter 2007": "Wolter, K. M. (2007). Introduction to Variance Estimation (2nd ed.). New York: Springer.",
@@ -145,10 +154,62 @@ def _regression(outcome: Outcome) -> str:
 def _variance(answer: Answer, cite: _Citing) -> list[str]:
     plan = answer.plan
     design = plan.design
+    sentences = _replicated(answer, cite) if answer.variance.replicated else []
+    if not answer.variance.replicated or answer.beside is not None:
+        sentences += _linearized(answer, cite)
+    by_design = answer.variance.origin != "supplied" or answer.beside is not None
+    if by_design and (answer.checkup.strata["psus"] == 1).any():
+        sentences.append(_SINGLE_PSU[design.single_psu])
+    counted = (
+        ""
+        if answer.variance.origin == "supplied"
+        else ", PSUs minus strata over the strata that hold the domain"
+    )
+    ratios = any(outcome.measure != "difference" for outcome in plan.outcome)
+    sentences.append(
+        f"Intervals are {confidence(plan)} t intervals with {answer.effects.df_resid:g} degrees of freedom{counted}"
+        + ("; those of ratios were made on the logarithm." if ratios else ".")
+    )
+    return sentences
+
+
+def _replicated(answer: Answer, cite: _Citing) -> list[str]:
+    made, design = answer.variance, answer.plan.design
+    number = f"{int(made.replicates):,}"
+    details = dict(made.details)
+    fay = f" with the factor {details['fay']:g}" if "fay" in details else ""
+    how = {
+        "jackknife": f"the jackknife {cite('Wolter 2007')}, each replicate without one PSU",
+        "brr": f"balanced repeated replication {cite('McCarthy 1969', 'Wolter 2007')}",
+        "fay": f"Fay's balanced repeated replication{fay} {cite('Judkins 1990', 'Wolter 2007')}",
+        "bootstrap": f"the rescaled bootstrap {cite('Rao, Wu & Yue 1992')}",
+        "successive-difference": f"successive difference replication {cite('Fay & Train 1995')}",
+    }[made.method]
+    origin = (
+        f"the {number} replicate weights that came with the extract ({', '.join(design.replicates.columns)})"
+        if made.origin == "supplied" and design.replicates is not None
+        else f"{number} replicates made from the design"
+    )
+    sentences = [f"Variances were estimated by {how}, with {origin}."]
+    if answer.plan.variance.propensity == "estimated":
+        sentences.append(
+            "Propensity, balancing weights, trimming, balance and effects were estimated again in every replicate."
+        )
+    else:
+        sentences.append("The propensity of the full sample was kept in every replicate.")
+    if made.failed:
+        sentences.append(f"{len(made.failed)} replicate(s) had no estimate and were left out.")
+    return sentences
+
+
+def _linearized(answer: Answer, cite: _Citing) -> list[str]:
+    plan = answer.plan
+    design = plan.design
     units = f"PSUs ({design.clusters[0]})" if design.clusters else "rows, each of which is a PSU of its own"
     strata = f" within strata ({', '.join(design.strata)})" if design.strata else ", without strata"
+    whose = "Beside them, variances" if answer.variance.replicated else "Variances"
     sentences = [
-        f"Variances were linearized {cite('Binder 1983', 'Wolter 2007')}: from the spread of the totals of each row's "
+        f"{whose} were linearized {cite('Binder 1983', 'Wolter 2007')}: from the spread of the totals of each row's "
         f"influence over {units}{strata}."
     ]
     if plan.variance.propensity == "estimated":
@@ -166,15 +227,6 @@ def _variance(answer: Answer, cite: _Citing) -> list[str]:
         )
     else:
         sentences.append("No finite population correction was made.")
-    if (answer.checkup.strata["psus"] == 1).any():
-        sentences.append(_SINGLE_PSU[design.single_psu])
-    sentences.append(
-        f"Intervals are {confidence(plan)} t intervals with {answer.effects.df_resid:g} degrees of freedom, PSUs "
-        "minus strata over the strata that hold the domain; those of ratios were made on the logarithm."
-        if any(outcome.measure != "difference" for outcome in plan.outcome)
-        else f"Intervals are {confidence(plan)} t intervals with {answer.effects.df_resid:g} degrees of freedom, PSUs "
-        "minus strata over the strata that hold the domain."
-    )
     return sentences
 
 

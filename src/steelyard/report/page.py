@@ -7,13 +7,14 @@ from importlib.resources import files
 from typing import Any
 
 from steelyard.errors import MissingExtraError
-from steelyard.plan import Plan
+from steelyard.plan import SuppliedReplicates
 from steelyard.report import tables
 from steelyard.report.disclosure import Released, release
 from steelyard.report.figures import Picture, pictures
 from steelyard.report.methods import methods
 from steelyard.report.numbers import count, thin
 from steelyard.report.record import plan_toml
+from steelyard.report.side_by_side import METHODS, standard_errors_table, variance_in_words
 from steelyard.report.suppression import is_hidden
 from steelyard.report.words import (
     balance_finding,
@@ -118,7 +119,8 @@ def _contents(answer: Answer, released: Released) -> dict[str, Any]:
         "domain": domain_name(plan),
         "question": question(released),
         "answers": [glance(row, plan) for row in effects],
-        "design": _design(plan),
+        "design": _design(answer),
+        "usage": answer.variance.usage(answer.weights.rows.replicates) if answer.weights.replicates else "",
         "trimming": [
             (what, rows if is_hidden(rows) else count(rows))  # type: ignore[arg-type]
             for what, rows in released.trimmed.items()
@@ -153,6 +155,7 @@ def _tables(answer: Answer, released: Released) -> dict[str, tables.Table]:
         tables.balance_table(released),
         tables.joint_tests_table(released),
         tables.effects_table(released),
+        standard_errors_table(released),
         tables.sensitivity_table(released),
         tables.inputs_table(answer.checkup.files),
         tables.pairs_table("versions", "Versions", ("Package", "Version"), _versions(answer).items()),
@@ -169,13 +172,21 @@ def _versions(answer: Answer) -> dict[str, str]:
     return versions
 
 
-def _design(plan: Plan) -> list[tuple[str, str]]:
+def _design(answer: Answer) -> list[tuple[str, str]]:
+    plan = answer.plan
     design = plan.design
+    supplied = [] if design.replicates is None else [("Replicate weights", _supplied(design.replicates))]
     return [
         ("Sampling weight", design.weight),
+        *supplied,
         ("Strata", ", ".join(design.strata) or "none: one stratum"),
         ("Clusters, from the first stage down", ", ".join(design.clusters) or "none: every row is a PSU"),
         ("Population counts", ", ".join(design.population) or "none: no finite population correction"),
         ("One PSU in a stratum", f"{design.single_psu}: {SINGLE_PSU[design.single_psu]}"),
-        ("Variance", f"{plan.variance.method}, propensity {plan.variance.propensity}"),
+        ("Variance", variance_in_words(answer.variance, plan)),
     ]
+
+
+def _supplied(replicates: SuppliedReplicates) -> str:
+    fay = "" if replicates.fay is None else f", Fay's factor {replicates.fay:g}"
+    return f"{', '.join(replicates.columns)}: {METHODS[replicates.method]}{fay}"

@@ -9,7 +9,8 @@ from typing import Any
 
 import numpy as np
 
-from steelyard.plan import Plan, plan_keys
+from steelyard.keys import plan_keys
+from steelyard.plan import Plan
 
 
 def record_text(record: Mapping[str, object], warnings: tuple[str, ...]) -> str:

@@ -261,9 +261,15 @@ def effects_table(released: Released) -> Table:
         *("Outcome", "Measure", "Exposed", "Reference", "Estimate", "from", "to"),
         *("estimated", "known", "t", "p"),
     )
+    replicates = "" if pd.isna(first["replicates"]) else f", {count(first['replicates'])} replicates"
+    design = (
+        ""
+        if pd.isna(first["strata"])
+        else f"{cell(first['psus'], count)} PSUs, {count(first['strata'])} strata, "
+    )
     note = (
-        f"{first['estimand']}; domain: {first['domain']}. {cell(first['rows'], count)} rows, "
-        f"{cell(first['psus'], count)} PSUs, {count(first['strata'])} strata, {first['df']:g} degrees of freedom. SE: "
+        f"{first['estimand']}; domain: {first['domain']}. {cell(first['rows'], count)} rows, {design}"
+        f"{first['df']:g} degrees of freedom; variance: {first['variance']}{replicates}. SE: "
         "standard error, with the propensity counted as estimated and taken as known. The test of a ratio is that of "
         "its logarithm. An effect adjusted for covariates is a regression's, not the contrast of the means beside it."
     )

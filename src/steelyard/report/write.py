@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import io
+import json
 from pathlib import Path
 
 import pandas as pd
@@ -14,7 +15,6 @@ from steelyard.report.page import report_html
 from steelyard.report.record import plan_json, record_text
 from steelyard.report.staging import staged
 from steelyard.results.answer import Answer
-from steelyard.results.weights_file import SCHEMA
 
 FILES = ("effects.csv", "balance.csv", "weights.parquet", "report.html", "record.json")
 REVIEW = "One row a person: not for release without review by a disclosure officer."
@@ -36,7 +36,7 @@ def write_answer(answer: Answer, directory: Path, released: Released | None = No
     released = release(answer) if released is None else released
     # Everything that can be made in memory is, before the disk is touched.
     texts = {
-        "effects.csv": csv_text(released.effects),
+        "effects.csv": csv_text(released.every_effect),
         "balance.csv": csv_text(released.balance),
         "report.html": report_html(answer, released),
         "record.json": record_text(answer.record, released.warnings),
@@ -62,9 +62,12 @@ def _write_weights(answer: Answer, path: Path) -> None:
     metadata = {
         "steelyard.plan": plan_json(answer.plan),
         "steelyard.plan_sha256": str(answer.record.get("plan_sha256", "")),
+        "steelyard.variance": json.dumps(answer.variance.record(), ensure_ascii=False),
         "steelyard.note": REVIEW,
     }
-    schema = SCHEMA.with_metadata(metadata)
+    if answer.weights.replicates is not None:
+        metadata["steelyard.how_to_use"] = answer.variance.usage(answer.weights.rows.replicates)
+    schema = answer.weights.schema.with_metadata(metadata)
     with pq.ParquetWriter(path, schema) as writer:
         for batch in answer.weights():
             writer.write_batch(pa.RecordBatch.from_arrays(batch.columns, schema=schema))

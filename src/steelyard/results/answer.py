@@ -2,15 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 
 import pandas as pd
-import pyarrow as pa
 
 from steelyard.data.checkup import Checkup
 from steelyard.plan import Plan
 from steelyard.results.estimates import EstimateResults, JointTest
+from steelyard.results.variance_made import VarianceMade
+from steelyard.results.weights_file import WeightFile
 
 
 @dataclass(frozen=True)
@@ -79,6 +79,10 @@ class Answer:
         One parameter for each outcome of the plan; ``effects.table`` has the columns of effects.csv.
     effects_known : EstimateResults
         The same with the propensity treated as known: what ignoring its estimation would have claimed.
+    variance : VarianceMade
+        How the variance of ``effects``, of balance and of the propensity was made.
+    beside, beside_known : EstimateResults or None
+        The same effects with the linearized variance, where replicates made the first and both were asked for.
     sensitivity : frame
         E-values: ``outcome``, ``measure``, ``risk_ratio`` (the ratio the E-value is for, exact or by the
         published approximation), ``risk_ratio_low``, ``risk_ratio_high``, ``e_value``, ``e_value_limit``
@@ -87,8 +91,8 @@ class Answer:
     warnings : texts, in the order in which they arose
     record : dict
         Versions, input digests, seeds, timings: what ``record.json`` says.
-    weights : callable
-        Gives the record batches of weights.parquet, in the order of the extract.
+    weights : WeightFile
+        The rows of weights.parquet, in the order of the extract.
     """
 
     plan: Plan
@@ -98,7 +102,16 @@ class Answer:
     balance: BalanceResults
     effects: EstimateResults
     effects_known: EstimateResults
+    variance: VarianceMade
+    beside: EstimateResults | None
+    beside_known: EstimateResults | None
     sensitivity: pd.DataFrame
     warnings: tuple[str, ...]
     record: dict[str, object]
-    weights: Callable[[], Iterator[pa.RecordBatch]]
+    weights: WeightFile
+
+    @property
+    def effects_table(self) -> pd.DataFrame:
+        """The effects as effects.csv has them: under the plan's variance, then under the one beside it."""
+        tables = [self.effects.table] + ([self.beside.table] if self.beside is not None else [])
+        return pd.concat(tables, ignore_index=True)

@@ -6,7 +6,6 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from steelyard.design.survey import SurveyDesign
 from steelyard.estimate.moments import EXPOSED, REFERENCE, Moments
 from steelyard.outcome.effects import Effects
 from steelyard.outcome.measures import SCALES
@@ -19,6 +18,7 @@ from steelyard.results.sensitivity import (
     ratio_of_difference,
     ratio_of_odds,
 )
+from steelyard.results.variance_made import VarianceMade
 
 Floats = NDArray[np.float64]
 
@@ -28,7 +28,8 @@ def effect_results(
     effects: Effects,
     values: Floats,
     covariance: Floats,
-    design: SurveyDesign,
+    *,
+    made: VarianceMade,
     rows: int,
     outcomes: Moments,
     title: str,
@@ -38,10 +39,11 @@ def effect_results(
     ``params`` and the covariance are on the scale of each measure's link (logarithms of ratios). In the
     table, a ratio's standard error is that of the ratio itself (delta method), its interval the
     exponential of the interval of the logarithm, its test that of the logarithm against zero.
-    ``outcomes`` are the outcomes' moments; the table ends with the counts that disclosure control needs.
+    ``made`` says how the variance was made. ``outcomes`` are the outcomes' moments; the table ends with the
+    counts that disclosure control needs.
     """
     names = tuple(estimates.names[0] for estimates in effects.estimates)
-    results = EstimateResults(values, covariance, names, design.df, title=title)
+    results = EstimateResults(values, covariance, names, made.df, title=title)
     limits = results.conf_int(1 - plan.variance.confidence).to_numpy()
     exponential = np.array([SCALES[o.measure].exponential for o in effects.outcomes])
     estimate = np.where(exponential, np.exp(np.where(exponential, values, 0)), values)
@@ -60,10 +62,11 @@ def effect_results(
             "df": results.df_resid,
             "statistic": results.tvalues.to_numpy(),
             "p_value": results.pvalues.to_numpy(),
-            "variance": plan.variance.method,
+            "variance": made.name,
             "rows": rows,
-            "psus": design.psus,
-            "strata": design.strata,
+            "psus": made.psus,
+            "strata": made.strata,
+            "replicates": made.replicates,
             "rows_exposed": int(outcomes.rows[EXPOSED]),
             "rows_reference": int(outcomes.rows[REFERENCE]),
             "nonzero_exposed": outcomes.present[EXPOSED].astype(int),

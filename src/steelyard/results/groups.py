@@ -5,14 +5,15 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 
 import numpy as np
+from numpy.typing import NDArray
 
 from steelyard.balance.columns import TermColumns
 from steelyard.balance.conditions import ConditionsKernel, conditions_of, has_conditions
-from steelyard.data.blocks import Rows
+from steelyard.data.blocks import Block, Rows, Term
 from steelyard.data.passes import Engine
 from steelyard.estimate.estimates import Estimates
 from steelyard.exposure.balancing import Balancing
-from steelyard.exposure.group_means import MeansAsked
+from steelyard.exposure.group_means import MeansAsked, SumsKernel
 from steelyard.exposure.one_pass import RowsKernel, sums_in_one_pass
 from steelyard.exposure.propensity import coefficients
 from steelyard.outcome.contrasts import contrast, outcome_means_asked
@@ -53,29 +54,36 @@ def groups(
     EstimationError
         See :func:`steelyard.outcome.effects.effects`.
     """
-    columns = TermColumns(rows.terms)
-    asked = {
-        "before": MeansAsked(columns.labels, columns, "sampling"),
-        "after": MeansAsked(columns.labels, columns, "combined"),
-        "outcomes": outcome_means_asked(plan.outcome, rows.outcomes),
+    columns, every = TermColumns(rows.terms), _EveryColumn.of(rows)
+    kernels: dict[str, RowsKernel] = {
+        "before": SumsKernel(columns, "sampling"),
+        "combined": SumsKernel(every, "combined"),
     }
-    kernels: dict[str, RowsKernel] = {name: means.kernel for name, means in asked.items()}
-    if has_conditions(balancing):
+    derived = _conditions_are_differences(balancing)
+    if has_conditions(balancing) and not derived:
         kernels["conditions"] = ConditionsKernel()
     sums = sums_in_one_pass("balance and effects", kernels, balancing, engine, rows.blocks)
-    means = {name: of.made_of(sums[name]) for name, of in asked.items()}
+    totals, weight = sums["combined"]
+    if derived:
+        model = totals[:, rows.exposure_model.index, :]
+        sums["conditions"] = model[0] - model[1]
+    before = MeansAsked(columns.labels, columns, "sampling").made_of(sums["before"])
+    after = MeansAsked(columns.labels, columns, "combined").made_of((totals[:, every.of_terms], weight))
+    of_outcomes = outcome_means_asked(plan.outcome, rows.outcomes).made_of(
+        (totals[:, rows.outcomes, :], weight)
+    )
     found = effects(
         rows,
         plan.outcome,
         balancing,
         engine,
         full=None if full is None else full.effects,
-        means=means["outcomes"],
+        means=of_outcomes,
     )
     estimates = {
         "propensity": coefficients(balancing),
-        "before": means["before"].differences(),
-        "after": means["after"].differences(),
+        "before": before.differences(),
+        "after": after.differences(),
     }
     estimates |= {f"effect {place}": effect for place, effect in enumerate(found.estimates)}
     if "conditions" in sums:
@@ -97,3 +105,31 @@ def _ratio_places(outcomes: tuple[Outcome, ...], found: Effects) -> list[int]:
         and not outcome.covariates
         and np.all(means[:, place] > 0)
     ]
+
+
+def _conditions_are_differences(balancing: Balancing) -> bool:
+    """Whether the moment conditions are differences of the columns' sums under the combined weights as they are."""
+    plain = balancing.share is None and balancing.cap is None and balancing.propensity_range is None
+    return has_conditions(balancing) and plain and balancing.fit.scale.centre is None
+
+
+@dataclass(frozen=True)
+class _EveryColumn:
+    """From a block to all its columns, then the terms that are products of two: one matrix product sums them all.
+
+    ``of_terms`` gives the place of each term.
+    """
+
+    products: tuple[Term, ...]
+    of_terms: tuple[int, ...]
+
+    @classmethod
+    def of(cls, rows: Rows) -> _EveryColumn:
+        products = tuple(term for term in rows.terms if term.times is not None)
+        place = {id(term): len(rows.names) + k for k, term in enumerate(products)}
+        return cls(products, tuple(place.get(id(term), term.index) for term in rows.terms))
+
+    def __call__(self, block: Block) -> NDArray[np.float64]:
+        if not self.products:
+            return block.columns
+        return np.concatenate([block.columns, TermColumns(self.products)(block)], axis=1)
