@@ -20,6 +20,7 @@ import pyarrow.parquet as pq
 
 HERE = Path(__file__).parent
 SEED = 20261
+REPLICATES = 100
 REGIONS = ("Ostrel Coast", "Vennik Hills", "Tharo Plain", "Quennar Valley", "Ziskel Steppe")
 # Areas in the population and in the sample, by region, rural and urban: fractions differ on purpose.
 AREAS = {
@@ -181,9 +182,31 @@ def households_of(rng: np.random.Generator, area: pd.DataFrame, chance: float, a
     chosen = rng.choice(homes, size=min(29, len(homes)), replace=False)
     answer = rng.random(len(chosen)) < 0.93
     kept = area[area["household"].isin(chosen[answer])].copy()
-    kept["person_weight"] = len(homes) / answer.sum() / chance * np.exp(0.12 * rng.normal(size=len(kept)))
+    # Homes that did not answer are made up for by those that did, area by area.
+    kept["person_weight"] = len(homes) / answer.sum() / chance
     kept["areas_in_stratum"] = areas
     return kept
+
+
+def redrawn(rng: np.random.Generator, drawn: pd.DataFrame) -> np.ndarray:
+    """Return what the producer's bootstrap multiplies each person's weight by, (persons, REPLICATES).
+
+    In each replicate n - 1 of a stratum's n areas are drawn with replacement, and what that moves is shrunk by the
+    share of the country's areas that was not drawn (Rao, Wu & Yue 1992). The steppe's one town is redrawn with its
+    countryside.
+    """
+    stratum = drawn["region"] + np.where(drawn["region"] == REGIONS[-1], "", drawn["urban"].astype(str))
+    area = drawn["region"] + drawn["urban"].astype(str) + "-" + drawn["area"].astype(str)
+    multipliers = np.empty((len(drawn), REPLICATES))
+    for name in stratum.unique():
+        here = (stratum == name).to_numpy()
+        unit, codes = area[here].unique(), pd.factorize(area[here])[0]
+        first = drawn[here].drop_duplicates(["urban"])
+        reach = np.sqrt(1 - len(unit) / first["areas_in_stratum"].sum())
+        draws = rng.integers(len(unit), size=(REPLICATES, len(unit) - 1))
+        times = np.array([np.bincount(draw, minlength=len(unit)) for draw in draws]).T
+        multipliers[here] = (1 - reach + reach * times * len(unit) / (len(unit) - 1))[codes]
+    return multipliers
 
 
 def extract(rng: np.random.Generator, drawn: pd.DataFrame) -> pa.Table:
@@ -204,6 +227,7 @@ def extract(rng: np.random.Generator, drawn: pd.DataFrame) -> pa.Table:
     child = drawn["school_age"].to_numpy()
     days = np.where(child, np.where(some(0.01), 98, drawn["days"].clip(upper=60)), 99)
     visited = pd.Timestamp("2024-03-04") + pd.to_timedelta(rng.integers(0, 75, n), unit="D")
+    replicates = weight[:, np.newaxis] * redrawn(rng, drawn)
     return pa.table(
         {
             "region": pa.array(drawn["region"], pa.string()),
@@ -228,6 +252,7 @@ def extract(rng: np.random.Generator, drawn: pd.DataFrame) -> pa.Table:
             "diarrhoea": pa.array(np.where(some(0.008), 9, drawn["ill"]), pa.int8()),
             "enrolled": pa.array(np.where(child, drawn["enrolled"], 9), pa.int8()),
             "interview_date": pa.array(visited.date, pa.date32()),
+            **{f"rep_{r:03d}": pa.array(replicates[:, r - 1].round(3)) for r in range(1, REPLICATES + 1)},
         }
     )
 

@@ -10,6 +10,7 @@ from report_answers import made_answer, made_plan
 
 from steelyard.plan import Design, Exposure, Outcome, Variance
 from steelyard.report.methods import REFERENCES, methods
+from steelyard.results.variance_made import VarianceMade
 
 PLAIN = Exposure(formula="piped ~ urban")
 
@@ -31,6 +32,31 @@ def test_the_references_are_exactly_those_cited(changes):
     }
     assert sorted(REFERENCES[key] for key in cited) == sorted(references)
     assert len(references) == len(set(references))
+
+
+REPLICATED = {
+    "jackknife": "the jackknife that leaves out one PSU at a time (Wolter 2007), with 280 replicates made",
+    "brr": "balanced repeated replication (McCarthy 1969; Wolter 2007)",
+    "fay": "Fay's balanced repeated replication with the factor 0.3 (Judkins 1990; Wolter 2007)",
+    "bootstrap": "the rescaled bootstrap (Rao, Wu & Yue 1992)",
+    "successive-difference": "successive difference replication (Fay & Train 1995)",
+}
+
+
+@pytest.mark.parametrize("method", REPLICATED)
+@pytest.mark.parametrize("beside", [True, False])
+def test_replication_is_said_with_its_own_references_alone(method, beside):
+    details = (("fay", 0.3),) if method == "fay" else ()
+    made = VarianceMade(method, "made", 260.0, 280, 20, 280, factors=(1.0,) * 280, details=details)
+    answer = made_answer(plan=made_plan(), variance=made)
+    answer = replace(answer, beside=answer.effects if beside else None, beside_known=answer.effects_known)
+    paragraphs, references = methods(answer)
+    text = " ".join(paragraphs)
+    assert REPLICATED[method] in text
+    assert ("Beside them, variances were linearized" in text) is beside
+    assert "estimated again in every replicate" in text
+    cited = {key for key in REFERENCES if re.search(rf"[(;] ?{re.escape(key)}[);]", text)}
+    assert sorted(REFERENCES[key] for key in cited) == sorted(references)
 
 
 def test_the_paragraph_follows_the_plan():

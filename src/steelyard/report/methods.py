@@ -54,6 +54,14 @@ _SINGLE_PSU = {
     "collapse": "Strata with one PSU were joined with a neighbouring stratum.",
     "self-representing": "PSUs that are alone in their stratum were taken as chosen with certainty.",
 }
+# How each method is called in a sentence, and where it was published.
+_REPLICATED: dict[str, tuple[str, tuple[str, ...]]] = {
+    "jackknife": ("the jackknife that leaves out one PSU at a time", ("Wolter 2007",)),
+    "brr": ("balanced repeated replication", ("McCarthy 1969", "Wolter 2007")),
+    "fay": ("Fay's balanced repeated replication", ("Judkins 1990", "Wolter 2007")),
+    "bootstrap": ("the rescaled bootstrap", ("Rao, Wu & Yue 1992",)),
+    "successive-difference": ("successive difference replication", ("Fay & Train 1995",)),
+}
 _LINKS = {"difference": "identity", "ratio": "log", "odds-ratio": "logit"}
 
 
@@ -178,19 +186,14 @@ def _replicated(answer: Answer, cite: _Citing) -> list[str]:
     number = f"{int(made.replicates):,}"
     details = dict(made.details)
     fay = f" with the factor {details['fay']:g}" if "fay" in details else ""
-    how = {
-        "jackknife": f"the jackknife {cite('Wolter 2007')}, each replicate without one PSU",
-        "brr": f"balanced repeated replication {cite('McCarthy 1969', 'Wolter 2007')}",
-        "fay": f"Fay's balanced repeated replication{fay} {cite('Judkins 1990', 'Wolter 2007')}",
-        "bootstrap": f"the rescaled bootstrap {cite('Rao, Wu & Yue 1992')}",
-        "successive-difference": f"successive difference replication {cite('Fay & Train 1995')}",
-    }[made.method]
+    how, sources = _REPLICATED[made.method]
+    cited = cite(*sources)
     origin = (
         f"the {number} replicate weights that came with the extract ({', '.join(design.replicates.columns)})"
         if made.origin == "supplied" and design.replicates is not None
         else f"{number} replicates made from the design"
     )
-    sentences = [f"Variances were estimated by {how}, with {origin}."]
+    sentences = [f"Variances were estimated by {how}{fay} {cited}, with {origin}."]
     if answer.plan.variance.propensity == "estimated":
         sentences.append(
             "Propensity, balancing weights, trimming, balance and effects were estimated again in every replicate."

@@ -59,6 +59,8 @@ def standard_errors_table(released: Released) -> Table:
 
 def _row(record: dict[str, object], known: dict[str, object], first: dict[str, object]) -> tuple[str, ...]:
     effect = with_decimals(effect_decimals(first))
+    # One digit more than elsewhere, since these are here to be compared.
+    error = with_decimals(effect_decimals(first) + 1)
     replicates = record["replicates"]
     return (
         str(record["outcome"]),
@@ -66,8 +68,8 @@ def _row(record: dict[str, object], known: dict[str, object], first: dict[str, o
         str(record["variance"]),
         "" if pd.isna(replicates) else count(float(replicates)),  # type: ignore[arg-type]
         f"{record['df']:g}",
-        cell(record["std_error"], effect),
-        cell(known["std_error"], effect),
+        cell(record["std_error"], error),
+        cell(known["std_error"], error),
         _ratio(record["std_error"], first["std_error"]),
         cell(record["ci_low"], effect),
         cell(record["ci_high"], effect),

@@ -31,6 +31,7 @@ class VarianceMade:
     failed : mapping
         Replicate, from 1 -> why it has no estimate.
     details : what else was fixed, such as Fay's factor or the seed, by name
+    propensity : "estimated" again in every replicate, or "known": the full sample's kept
     """
 
     method: str
@@ -44,6 +45,7 @@ class VarianceMade:
     about_mean: bool = False
     failed: Mapping[int, str] | None = None
     details: tuple[tuple[str, float | int | str], ...] = ()
+    propensity: str = "estimated"
 
     @property
     def name(self) -> str:
@@ -63,6 +65,7 @@ class VarianceMade:
                 "replicates": int(self.replicates),
                 "factor": self.factor,
                 "replicate_factors": 1.0 if set(self.factors) == {1.0} else list(self.factors),
+                "propensity": self.propensity,
                 "centre": "replicate-mean" if self.about_mean else "full-sample",
                 "failed": {str(r): why for r, why in (self.failed or {}).items()},
                 **dict(self.details),
@@ -108,9 +111,9 @@ class VarianceMade:
             text += (
                 " For statistics without the exposure take sampling_weight and sampling_replicate_r instead."
             )
-        return text + (
-            " The propensity was estimated again in every replicate: nothing more needs to be done for it."
-        )
+        if self.propensity == "known":
+            return f"{text} The full sample's propensity was kept in every replicate, as if it were known."
+        return f"{text} The propensity was estimated again in every replicate: nothing more needs to be done for it."
 
 
 def by_linearization(plan: Plan, design: SurveyDesign) -> VarianceMade:
@@ -134,6 +137,7 @@ def by_replication(plan: Plan, design: SurveyDesign, found: Replicated) -> Varia
         about_mean=scheme.about_mean,
         failed={r + 1: why for r, why in found.failed.items()},
         details=scheme.details,
+        propensity=plan.variance.propensity,
     )
 
 
