@@ -27,7 +27,6 @@ _LINKS = {
     "logit": families.links.Logit,
     "probit": families.links.Probit,
 }
-LARGEST_ODDS = 1e300
 _CANONICAL = {("gaussian", "identity"), ("binomial", "logit"), ("poisson", "log")}
 
 
@@ -60,19 +59,13 @@ class Likelihood:
             return _expit(eta)
         return np.asarray(_link(self.link).inverse(eta))
 
-    def mean_and_complement(self, eta: Floats) -> tuple[Floats, Floats]:
-        """Return ``g^-1(eta)`` and ``1 - g^-1(eta)``, each with all its digits, for a logit or probit link."""
-        if self.link == "logit":
-            with np.errstate(over="ignore"):
-                odds_against = np.exp(np.negative(eta, dtype=np.float64))
-            # A finite number keeps the complement from being infinity times zero.
-            np.minimum(odds_against, LARGEST_ODDS, out=odds_against)
-            mean = 1 + odds_against
-            np.reciprocal(mean, out=mean)
-            odds_against *= mean
-            return mean, odds_against
-        # The link is symmetric, so 1 - e keeps its digits as the mean of -eta.
-        return self.mean(eta), self.mean(-eta)
+    def odds(self, eta: Floats) -> Floats:
+        """Return ``g^-1(eta) / (1 - g^-1(eta))`` as a new array, for a logit or probit link."""
+        with np.errstate(over="ignore", divide="ignore"):
+            if self.link == "logit":
+                return np.asarray(np.exp(eta))
+            # The link is symmetric, so 1 - e keeps its digits as the mean of -eta.
+            return np.asarray(self.mean(eta) / self.mean(-eta))
 
     def mean_slope(self, eta: Floats) -> Floats:
         """Return ``d mean / d eta``, of the shape of ``eta``."""

@@ -148,7 +148,7 @@ class BalancedRows:
 
     @cached_property
     def groups(self) -> tuple[Integers | slice, Integers | slice]:
-        """The places of the exposed and of the reference rows; a slice where one group is all there is."""
+        """The places of the exposed and of the reference rows; slices where one group is all there is."""
         is_exposed = self.block.exposure == 1
         if is_exposed.all():
             return slice(None), slice(0, 0)
@@ -160,12 +160,16 @@ class BalancedRows:
     def pure(self) -> Floats:
         """The estimand's weight of the propensity alone, before stabilizing and trimming; (n, K)."""
         rule, eta, likelihood = self.balancing_rule, self.eta, self.plan.fit.regression.likelihood
-        pure = np.empty_like(eta)
+        exposed, reference = self.groups
         with np.errstate(divide="ignore", over="ignore", invalid="ignore"):
-            for members, of_group in zip(self.groups, (rule.exposed, rule.reference), strict=True):
-                if isinstance(members, slice) and members == slice(None):
-                    return of_group(*likelihood.mean_and_complement(eta))
-                pure[members] = of_group(*likelihood.mean_and_complement(eta[members]))
+            if isinstance(exposed, slice):
+                every_row = exposed == slice(None)
+                return (
+                    rule.exposed(likelihood.odds(-eta)) if every_row else rule.reference(likelihood.odds(eta))
+                )
+            pure = np.empty_like(eta)
+            pure[exposed] = rule.exposed(likelihood.odds(-eta[exposed]))
+            pure[reference] = rule.reference(likelihood.odds(eta[reference]))
         return pure
 
     @cached_property

@@ -19,14 +19,16 @@ Floats = NDArray[np.float64]
 class BalancingRule:
     """The balancing weight of an estimand as a function of the propensity.
 
-    ``exposed`` and ``reference`` take ``e`` and ``1 - e`` (both given, so that neither loses digits) and
-    return the weight; ``*_slope`` return its derivative in ``e``. ``exposed_share`` and ``reference_share``
+    ``exposed`` and ``reference`` take the odds of the other group, ``(1 - e) / e`` for the exposed and
+    ``e / (1 - e)`` for the reference, and return the weight; they may work in the array they are given.
+    ``*_slope`` take ``e`` and ``1 - e`` (both, so that neither loses digits) and return the weight's
+    derivative in ``e``. ``exposed_share`` and ``reference_share``
     give the stabilizing factor from the share ``p`` of the exposed, ``*_share_slope`` the derivative of
     its logarithm in ``p``.
     """
 
-    exposed: Callable[[Floats, Floats], Floats]
-    reference: Callable[[Floats, Floats], Floats]
+    exposed: Callable[[Floats], Floats]
+    reference: Callable[[Floats], Floats]
     exposed_slope: Callable[[Floats, Floats], Floats]
     reference_slope: Callable[[Floats, Floats], Floats]
     exposed_share: Callable[[Floats], Floats]
@@ -37,8 +39,24 @@ class BalancingRule:
     target: str
 
 
-def _one(e: Floats, f: Floats) -> Floats:
-    return np.ones_like(e)
+def _one(odds: Floats) -> Floats:
+    return np.ones_like(odds)
+
+
+def _odds(odds: Floats) -> Floats:
+    return odds
+
+
+def _inverse_probability(odds: Floats) -> Floats:
+    # 1 / P(own) = 1 + P(other) / P(own).
+    return np.add(odds, 1, out=odds)
+
+
+def _other_probability(odds: Floats) -> Floats:
+    # P(other) = odds / (1 + odds), written so that infinite odds give 1 and none give 0.
+    np.reciprocal(odds, out=odds)
+    np.add(odds, 1, out=odds)
+    return np.reciprocal(odds, out=odds)
 
 
 def _zero(e: Floats, f: Floats) -> Floats:
@@ -57,8 +75,8 @@ def _zero_share(p: Floats) -> Floats:
 # whose spread standardizes a difference, and the population the weighted sample stands for.
 RULES: dict[str, BalancingRule] = {
     "ATE": BalancingRule(
-        exposed=lambda e, f: 1 / e,
-        reference=lambda e, f: 1 / f,
+        exposed=_inverse_probability,
+        reference=_inverse_probability,
         exposed_slope=lambda e, f: -1 / e**2,
         reference_slope=lambda e, f: 1 / f**2,
         exposed_share=lambda p: p,
@@ -70,7 +88,7 @@ RULES: dict[str, BalancingRule] = {
     ),
     "ATT": BalancingRule(
         exposed=_one,
-        reference=lambda e, f: e / f,
+        reference=_odds,
         exposed_slope=_zero,
         reference_slope=lambda e, f: 1 / f**2,
         exposed_share=_one_share,
@@ -81,7 +99,7 @@ RULES: dict[str, BalancingRule] = {
         target="the exposed population of the domain",
     ),
     "ATC": BalancingRule(
-        exposed=lambda e, f: f / e,
+        exposed=_odds,
         reference=_one,
         exposed_slope=lambda e, f: -1 / e**2,
         reference_slope=_zero,
@@ -93,8 +111,8 @@ RULES: dict[str, BalancingRule] = {
         target="the reference population of the domain",
     ),
     "ATO": BalancingRule(
-        exposed=lambda e, f: f,
-        reference=lambda e, f: e,
+        exposed=_other_probability,
+        reference=_other_probability,
         exposed_slope=lambda e, f: -np.ones_like(e),
         reference_slope=lambda e, f: np.ones_like(e),
         exposed_share=_one_share,
