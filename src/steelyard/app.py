@@ -32,6 +32,7 @@ Progress = Callable[[str, int, int], None]
 EXTRA = "pip install 'steelyard[app]'"
 FOUND, REFUSED, INTERRUPTED = 1, 2, 130
 LOG_WIDTH = 118
+COLUMNS_NAMED = 8
 STRATA_SHOWN = 30
 
 
@@ -104,7 +105,10 @@ def outline_extract(extract: str, plan: Path | None) -> None:
     _print_frame(console, "Columns", found.columns.drop(columns=["low", "high"]))
     for guess in found.guesses:
         others = f" (or {', '.join(guess.others)})" if guess.others else ""
-        console.print(f"{guess.part}: {', '.join(guess.columns)}{others}\n  {guess.reason}.")
+        named = ", ".join(guess.columns)
+        if len(guess.columns) > COLUMNS_NAMED:
+            named = f"{guess.columns[0]} to {guess.columns[-1]}"
+        console.print(f"{guess.part}: {named}{others}\n  {guess.reason}.")
     if not found.guesses:
         console.print("No column looks like a part of the design.")
     if plan is None:

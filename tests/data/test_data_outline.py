@@ -17,7 +17,7 @@ from steelyard.data.drafts import toml_text
 from steelyard.data.guesses import ColumnSummary, guess_design, no_answer_codes
 from steelyard.data.outline import outline
 from steelyard.data.source import open_extract
-from steelyard.plan import Plan, read_plan
+from steelyard.plan import Plan, SuppliedReplicates, read_plan
 from steelyard.study import Study
 
 N = 900
@@ -195,6 +195,16 @@ def test_without_any_guess_the_plan_says_what_to_name(tmp_path):
     assert "THE_WEIGHT" in made.plan_text.splitlines()[1]
     assert 'nowhere missing: "x"' in made.plan_text
     assert "files" not in keys["data"]
+
+
+def test_the_draft_of_supplied_replicates_is_a_plan_once_uncommented():
+    columns = {"weight": [1.5, 2.5, 3.5], **{f"rep_{r:02d}": [1.5, 2.5, 3.5] for r in range(1, 13)}}
+    text = outline(open_extract(pa.table(columns))).plan_text
+    for key in ("[design.replicates]", "columns =", "method =", "fay ="):
+        text = text.replace(f"# {key}", key)
+    text = text.replace('method = "..."', 'method = "fay"')
+    drafted = SuppliedReplicates(**tomllib.loads(text)["design"]["replicates"])
+    assert drafted == SuppliedReplicates(columns=("rep_*",), method="fay", fay=0.5)
 
 
 hostile = st.text(min_size=1, max_size=12).filter(lambda text: text.strip() and "\x00" not in text)

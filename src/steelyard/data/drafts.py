@@ -113,9 +113,21 @@ def _design(by_part: dict[str, Guess], unnamed: Sequence[str]) -> list[str]:
         lines += [
             f"# {toml_text(guess.columns[0])} to {toml_text(guess.columns[-1])} look like replicate weights: "
             f"{_plain(guess.reason)}.",
-            "# This plan makes its standard errors by linearization and leaves them alone.",
+            "# To use them, take the # away and write what their documentation says; with them strata and clusters",
+            '# may be left out. Then set method = "supplied" under [variance].',
+            "# [design.replicates]",
+            f"# columns = {_columns(guess.columns)}",
+            '# method = "..."  # jackknife, brr, fay, bootstrap, successive-difference',
+            "# fay = 0.5  # for fay, its factor; factor, replicate_factors and df where they are stated",
         ]
     return lines
+
+
+def _columns(names: Sequence[str]) -> str:
+    """Return a pattern where the names differ in their last digits alone and hold no pattern themselves; else all."""
+    stems = {name.rstrip("0123456789") for name in names}
+    stem = stems.pop()
+    return _toml_list(names) if stems or not stem or set(stem) & set("*?[") else toml_text(f"{stem}*")
 
 
 def _because(guess: Guess) -> list[str]:
