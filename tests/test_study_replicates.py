@@ -125,7 +125,7 @@ def test_a_domain_varies_with_the_whole_design(method):
         np.broadcast_to(told["replicate_factors"], told["replicates"]),
     )
     np.testing.assert_allclose(answer.effects.cov_params(), expected, rtol=1e-6)
-    assert (file.loc[~inside, "combined_replicate_1"] == 0).all()
+    assert (file.loc[~inside, ["combined_weight", "combined_replicate_1"]] == 0).all(axis=None)
 
 
 def test_the_propensity_may_be_held():
@@ -200,6 +200,28 @@ def test_an_adjusted_odds_ratio_is_fitted_again_too():
         use = w > 0
         fit = sm.GLM(MANY["b"][use], model[use], sm.families.Binomial(), freq_weights=w[use]).fit(tol=1e-14)
         values.append(fit.params.iloc[-1] if hasattr(fit.params, "iloc") else fit.params[-1])
+    expected = np.sqrt(covariance(np.array([values]), 1.0, factors)[0, 0])
+    assert answer.effects.bse.iloc[0] == pytest.approx(expected, rel=1e-6)
+
+
+def test_rows_without_weight_and_a_fit_without_weights():
+    frame = MANY.copy()
+    frame.loc[frame.index % 7 == 0, "w"] = 0.0
+    exposure = Exposure(formula="a ~ x1 + C(x2)", weighted=False, link="probit")
+    answer = study(exposure=exposure, variance=Variance(method="jackknife")).run(frame)
+    columns, factors = dropped_psus(frame)
+    x, a, y = design_columns(frame), frame["a"].to_numpy(float), frame["y"].to_numpy()
+    base = frame["w"].to_numpy()
+    values = []
+    for s in columns.T:
+        use = s > 0
+        # Without sampling weights a replicate still multiplies: by 0, or by what makes up for the PSU left out.
+        multiplier = s[use] / base[use]
+        probit = sm.families.Binomial(sm.families.links.Probit())
+        fit = sm.GLM(a[use], x[use], probit, freq_weights=multiplier).fit(tol=1e-14, maxiter=200)
+        e = fit.predict(x)
+        w = s * oracle.balancing_weight("ATE", e, a)
+        values.append((w * a) @ y / (w @ a) - (w * (1 - a)) @ y / (w @ (1 - a)))
     expected = np.sqrt(covariance(np.array([values]), 1.0, factors)[0, 0])
     assert answer.effects.bse.iloc[0] == pytest.approx(expected, rel=1e-6)
 
