@@ -1,0 +1,1 @@
+"""Outcome models with clusters in them, under a weight at each level."""
