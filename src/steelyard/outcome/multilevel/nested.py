@@ -51,7 +51,7 @@ class Nested:
     def columns(self) -> int:
         """K, the number of columns of weights."""
         weights = (self.row_weight, self.cluster_weight, self.top_weight)
-        return max(w.shape[1] for w in weights if w is not None)
+        return max(int(w.shape[1]) for w in weights if w is not None)
 
     @property
     def cluster_firsts(self) -> Integers:

@@ -82,10 +82,7 @@ def carried_to_unscaled(derivative: Floats, weight: Floats, group: Integers, met
     first = firsts(group)
     total = np.add.reduceat(derivative, first, axis=0)[group]
     share = _share(weight, group, first)
-    if method == "size":
-        move = -share
-    else:
-        move = share - 2 * _share(weight**2, group, first)
+    move = -share if method == "size" else share - 2 * _share(weight**2, group, first)
     return np.asarray(derivative + move[:, np.newaxis] * total)
 
 
