@@ -126,9 +126,7 @@ def _cluster_parts(at: Level) -> _ClusterParts:
         c = top.c[:, place, np.newaxis]
         e = e - u * effect[:, place, np.newaxis]
         f = f - u[..., np.newaxis] * (c * each[:, place])[:, :, np.newaxis]
-    return _ClusterParts(
-        at.sums.weight[:, :, np.newaxis], c, u, e, spread.reshape(count, clusters, q * q), f
-    )
+    return _ClusterParts(at.sums.weight[:, :, np.newaxis], c, u, e, spread.reshape(count, clusters, q * q), f)
 
 
 def _cov_blocks(at: Level, part: _ClusterParts) -> tuple[Floats, Floats, Floats, Floats]:
@@ -138,7 +136,9 @@ def _cov_blocks(at: Level, part: _ClusterParts) -> tuple[Floats, Floats, Floats,
     ee = _outer(part.e, part.e)
     sum_ee = np.sum(w * ee, axis=1)
     by_cov = 0.5 * (sum_ee / phi - np.sum(w * part.flat, axis=1))
-    cov_cov = 0.5 * _sorted(w * part.flat, part.flat, "trace") - _sorted(w * ee, part.flat, "ends") / phi[:, None]
+    cov_cov = (
+        0.5 * _sorted(w * part.flat, part.flat, "trace") - _sorted(w * ee, part.flat, "ends") / phi[:, None]
+    )
     weighted = (w[..., np.newaxis] * part.f).transpose(0, 3, 2, 1).reshape(count, p * q, clusters)
     fixed_cov = -(weighted @ part.e).reshape(count, p, q * q) / phi[:, None]
     return by_cov, cov_cov, fixed_cov, -sum_ee / (2 * phi)

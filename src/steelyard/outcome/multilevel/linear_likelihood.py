@@ -55,7 +55,10 @@ class Coordinates:
     def moves(self, root: Floats) -> Floats:
         """Return the derivative of V by each free entry of L, (K, entries, q, q)."""
         row, column = self.entries
-        along = self.basis[:, row].T[np.newaxis, :, :, np.newaxis] * root.transpose(0, 2, 1)[:, column, np.newaxis]
+        along = (
+            self.basis[:, row].T[np.newaxis, :, :, np.newaxis]
+            * root.transpose(0, 2, 1)[:, column, np.newaxis]
+        )
         return np.asarray(along + along.swapaxes(2, 3))
 
     def curves(self, slope: Floats) -> Floats:
@@ -173,9 +176,7 @@ def level(sums: ClusterSums, coordinates: Coordinates, points: Floats) -> Level:
     with np.errstate(invalid="ignore", divide="ignore"):
         value = -0.5 * (sums.size * (np.log(2 * np.pi * phi) + 1) + twice)
     value = np.where(phi > 0, value, -np.inf)
-    return Level(
-        sums, coordinates, points, root, value, beta, phi, cross, spread, own, top
-    )
+    return Level(sums, coordinates, points, root, value, beta, phi, cross, spread, own, top)
 
 
 def _summed(left: Floats, right: Floats) -> Floats:

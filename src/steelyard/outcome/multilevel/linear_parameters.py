@@ -36,7 +36,9 @@ class Layout:
         return (
             *self.model.fixed,
             *(
-                f"variance: {levels[0]} {random[i]}" if i == j else f"covariance: {levels[0]} {random[j]}, {random[i]}"
+                f"variance: {levels[0]} {random[i]}"
+                if i == j
+                else f"covariance: {levels[0]} {random[j]}, {random[i]}"
                 for i, j in zip(*self.pairs, strict=True)
             ),
             *((f"variance: {levels[1]} {random[0]}",) if self.model.three else ()),

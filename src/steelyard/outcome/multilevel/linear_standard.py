@@ -240,7 +240,9 @@ def _refuse(model: LinearModel, look: _Look) -> None:
             mend="Leave incomplete rows out of the domain.",
         )
     if not look.weight > 0:
-        raise EstimationError(f"{model.what}: no row carries weight.", mend="Check the domain and the weights.")
+        raise EstimationError(
+            f"{model.what}: no row carries weight.", mend="Check the domain and the weights."
+        )
     if not look.several_rows:
         raise EstimationError(
             f"{model.what}: each of the {look.clusters} clusters ({model.levels[0]}) has only one row that "

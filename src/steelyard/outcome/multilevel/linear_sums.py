@@ -80,9 +80,7 @@ def cluster_sums(
     what: str, standard: Standard, engine: Engine, rows: Sequence[Nested], columns: Integers
 ) -> ClusterSums:
     """Return the sums by cluster under some columns of weights, in one pass."""
-    parts, gram, size = engine.run(
-        f"{what}: sums by cluster", rows, _SumsKernel(standard, columns), _merge
-    )
+    parts, gram, size = engine.run(f"{what}: sums by cluster", rows, _SumsKernel(standard, columns), _merge)
     q, width = len(standard.random), standard.fixed.shape[1] + 1
     by_cluster = np.concatenate(parts, axis=1)
     upper = np.triu_indices(q)
@@ -145,9 +143,7 @@ class _SumsKernel:
         firsts = run.cluster_firsts
         ends = np.append(firsts[1:], len(run.y))
         row_weight = picked(run.row_weight, self.columns)
-        total = np.broadcast_to(
-            run.cluster_total_weight(self.columns), (len(firsts), len(self.columns))
-        )
+        total = np.broadcast_to(run.cluster_total_weight(self.columns), (len(firsts), len(self.columns)))
         q, width = len(self.standard.random), self.standard.fixed.shape[1] + 1
         upper_z, upper_a = np.triu_indices(q), np.triu_indices(width)
         own = len(upper_z[0]) + q * width
