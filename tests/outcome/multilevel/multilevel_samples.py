@@ -52,7 +52,7 @@ def sample(
 
 
 def without_slopes(run, within=False):
-    """The run with the random constant alone; ``within``: with a response that clusters differ less in than by chance."""
+    """The run with the random constant alone; ``within``: with hardly any difference of clusters."""
     y = run.y
     if within:
         means = np.bincount(run.cluster, y) / np.bincount(run.cluster)
@@ -62,7 +62,10 @@ def without_slopes(run, within=False):
 
 def nested(y, x, z, cluster, top=None, row=None, own=None, upper=None):
     """A run with weights of one unless given, one column."""
-    column = lambda w, n: np.ones((n, 1)) if w is None else np.asarray(w, float).reshape(n, -1)
+
+    def column(w, n):
+        return np.ones((n, 1)) if w is None else np.asarray(w, float).reshape(n, -1)
+
     clusters = cluster[-1] + 1
     tops = None if top is None else column(upper, top[-1] + 1)
     return Nested(y, x, z, cluster, top, column(row, len(y)), column(own, clusters), tops)

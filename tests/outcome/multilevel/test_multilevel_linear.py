@@ -27,6 +27,7 @@ from steelyard.outcome.multilevel.linear_curvature import derivatives
 from steelyard.outcome.multilevel.linear_likelihood import Coordinates, level
 from steelyard.outcome.multilevel.linear_standard import standard
 from steelyard.outcome.multilevel.linear_sums import cluster_sums
+from steelyard.outcome.multilevel.nested import Nested
 
 ENGINE = Engine()
 SHAPES = [(2, 0), (2, 1), (2, 2), (3, 0), (3, 2)]
@@ -372,9 +373,15 @@ def test_rows_and_clusters_of_weight_zero_count_for_nothing():
     run.cluster_weight[::5] = 0
     kept = (run.row_weight[:, 0] > 0) & (run.cluster_weight[run.cluster, 0] > 0)
     codes, cluster = np.unique(run.cluster[kept], return_inverse=True)
-    own, rows = run.cluster_weight[codes], run.row_weight[kept]
-    fewer = replace(
-        run, y=run.y[kept], x=run.x[kept], z=run.z[kept], cluster=cluster, row_weight=rows, cluster_weight=own
+    fewer = Nested(
+        run.y[kept],
+        run.x[kept],
+        run.z[kept],
+        cluster,
+        None,
+        run.row_weight[kept],
+        run.cluster_weight[codes],
+        None,
     )
     model = MODELS[2, 1]
     np.testing.assert_allclose(

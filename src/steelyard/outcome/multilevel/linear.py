@@ -136,18 +136,8 @@ def fit_linear(
     """
     layout, inside = Layout(model), standard(model, engine, rows)
     sums = cluster_sums(model.what, inside, engine, rows, np.arange(1))
-    free = Coordinates(np.eye(len(model.random)), len(model.random), model.three)
-    size = float(cluster_size(sums)[0])
-    if start is None:
-        first = best_start(sums, free)
-    else:
-        first = point_of(free, *layout.inside(inside, start), size)[np.newaxis]
-    found = search(sums, free, first, most_steps)
-    if found.failed and start is not None:
-        found = search(sums, free, best_start(sums, free), most_steps)
-    if found.failed:
-        raise _failure(model, found.failed[0])
-    at, steps = _at_its_rank(model, sums, level(sums, free, found.points), most_steps)
+    near = None if start is None else layout.inside(inside, start)
+    at, steps = _full_sample(model, sums, near, most_steps)
     settled = _settled(model, at)
     values = layout.values(inside, at.beta, at.cov, at.top_cov, at.phi)
     count = column_count(rows)
@@ -173,9 +163,25 @@ def fit_linear(
         combine=_combine(layout, inside, settled),
         aliased=tuple(n for n, kept in zip(model.fixed, inside.keep, strict=True) if not kept),
         boundary=_boundary(model, settled),
-        steps=int(found.steps[0]) + steps,
+        steps=steps,
         failed=failed,
     )
+
+
+def _full_sample(
+    model: LinearModel, sums: ClusterSums, near: tuple[Floats, float] | None, most_steps: int
+) -> tuple[Level, int]:
+    """Return the solution of column 0 and the steps taken, from near a V and top variance or from the best start."""
+    free = Coordinates(np.eye(len(model.random)), len(model.random), model.three)
+    if near is not None:
+        point = point_of(free, *near, float(cluster_size(sums)[0]))
+        found = search(sums, free, point[np.newaxis], most_steps)
+    if near is None or found.failed:
+        found = search(sums, free, best_start(sums, free), most_steps)
+    if found.failed:
+        raise _failure(model, found.failed[0])
+    at, steps = _at_its_rank(model, sums, level(sums, free, found.points), most_steps)
+    return at, steps + int(found.steps[0])
 
 
 def _at_its_rank(model: LinearModel, sums: ClusterSums, at: Level, most_steps: int) -> tuple[Level, int]:

@@ -202,7 +202,7 @@ def _inverse_and_logdet(inner: Floats) -> tuple[Floats, Floats]:
         inverse[..., 0, 0], inverse[..., 1, 1] = d / det, a / det
         inverse[..., 0, 1] = inverse[..., 1, 0] = -b / det
         return inverse, np.log(det)
-    return np.linalg.inv(whole), np.linalg.slogdet(whole)[1]
+    return np.asarray(np.linalg.inv(whole)), np.asarray(np.linalg.slogdet(whole)[1])
 
 
 def solved(matrix: Floats, right: Floats) -> Floats:

@@ -86,25 +86,25 @@ def point_of(coordinates: Coordinates, cov: Floats, top: float, size: float) -> 
     turned = coordinates.basis.T @ cov @ coordinates.basis
     values, vectors = np.linalg.eigh(turned)
     inside = (vectors * np.maximum(values, least)) @ vectors.T
-    return _point(coordinates, inside, max(top, least))
+    return _point(coordinates, np.asarray(inside), max(top, least))
 
 
-def negligible(variance: Floats, size: Floats | float) -> NDArray[np.bool_]:
+def negligible(variance: Floats | float, size: Floats | float) -> NDArray[np.bool_]:
     """Return which variances, relative to that within, count as zero in clusters of such a size."""
-    return np.asarray(variance * size < NEGLIGIBLE)
+    return np.asarray(np.asarray(variance) * size < NEGLIGIBLE)
 
 
 def cluster_size(sums: ClusterSums) -> Floats:
     """Return the mean weight within a cluster, (K,)."""
-    weight = np.sum(sums.weight, axis=1)
-    return np.divide(sums.size, weight, out=np.ones_like(sums.size), where=weight > 0)
+    weight = np.broadcast_to(np.sum(sums.weight, axis=1), sums.size.shape)
+    return np.asarray(np.divide(sums.size, weight, out=np.ones_like(sums.size), where=weight > 0))
 
 
 def _point(coordinates: Coordinates, turned: Floats, top: float) -> Floats:
     """Return the point of a positive definite ``basis' V basis``, and of the top variance if it is free."""
     row, column = coordinates.entries
     lower = np.linalg.cholesky(turned)[row, column]
-    return np.append(lower, np.sqrt(top)) if coordinates.top else lower
+    return np.asarray(np.append(lower, np.sqrt(top)) if coordinates.top else lower)
 
 
 def _returning(sums: ClusterSums, coordinates: Coordinates, points: Floats, most_steps: int) -> Found:

@@ -102,64 +102,74 @@ def standard(model: LinearModel, engine: Engine, rows: Sequence[Nested]) -> Stan
         The model cannot be told apart on these rows: no cluster, or no top cluster, with two members; a
         random column that does not vary; nothing left of the response.
     """
-    first = engine.run(f"{model.what}: look", rows, _LookKernel(), _merge_looks)
-    _refuse(model, first)
-    mean = first.total / first.weight
-    fixed, response = len(model.fixed), len(model.fixed)
-    constant = np.flatnonzero((first.low == first.high) & (first.low != 0))
-    holds = [k for k in constant if k < fixed]
-    random = range(fixed + 1, fixed + 1 + len(model.random))
-    origin = np.zeros_like(mean)
-    if holds:
-        origin[: fixed + 1] = np.where(np.isin(np.arange(fixed + 1), holds), 0, mean[: fixed + 1])
-    if random[0] in constant:
-        origin[random[0] + 1 :] = mean[random[0] + 1 :]
-    elif model.three:
-        raise EstimationError(
-            f'{model.what}: with three levels the first random column, "{model.random[0]}", must be a constant.',
-            mend="Give three levels a random intercept.",
-        )
-    gram = engine.run(f"{model.what}: spreads", rows, _GramKernel(origin)) / first.weight
+    look = engine.run(f"{model.what}: look", rows, _LookKernel(), _merge_looks)
+    _refuse(model, look)
+    p = len(model.fixed)
+    origin = _origin(model, look)
+    gram = engine.run(f"{model.what}: spreads", rows, _GramKernel(origin)) / look.weight
     size = np.sqrt(np.diag(gram))
-    _refuse_random(model, gram[np.ix_(random, random)], first)
+    _refuse_random(model, gram[p + 1 :, p + 1 :], look)
     unit = np.where(size > 0, size, 1)
     gram = gram / np.outer(unit, unit)
-    keep = independent_columns(gram[:fixed, :fixed])
-    inside, own = gram[np.ix_(np.flatnonzero(keep), np.flatnonzero(keep))], np.flatnonzero(keep)
-    lower = linalg.cholesky(inside, lower=True) if len(own) else inside
-    to_fit = np.zeros((fixed, len(own)))
-    to_fit[own] = linalg.solve_triangular(lower, np.eye(len(own)), lower=True).T if len(own) else lower
-    ols = to_fit.T @ gram[:fixed, response]
+    keep = independent_columns(gram[:p, :p])
+    to_fit = _orthonormal(gram[:p, :p], keep)
+    ols = to_fit.T @ gram[:p, p]
     left = 1 - ols @ ols
-    if not size[response] > 0 or left < NOTHING_LEFT:
+    if not size[p] > 0 or left < NOTHING_LEFT:
         raise EstimationError(
             f"{model.what}: the fixed part reproduces the response in every row, so nothing varies.",
             mend="Check that the response is not among its own covariates.",
         )
-    to_fit = to_fit / unit[:fixed, np.newaxis]
-    to_raw, shift = to_fit.copy(), np.zeros(fixed)
-    y_centre = float(origin[response])
-    if holds:
-        level = first.low[holds[0]]
-        to_raw[holds[0]] -= origin[:fixed] @ to_fit / level
-        shift[holds[0]] = y_centre / level
-    spreads = np.ones(len(random))
-    spreads[:] = [first.low[k] if k in constant else unit[k] for k in random]
+    to_fit = to_fit / unit[:p, np.newaxis]
+    to_raw, shift, constants = to_fit.copy(), np.zeros(p), np.flatnonzero(look.constant[:p])
+    if len(constants):
+        at, value = constants[0], look.low[constants[0]]
+        to_raw[at] -= origin[:p] @ to_fit / value
+        shift[at] = origin[p] / value
+    spreads = np.where(look.constant, look.low, unit)[p + 1 :]
     effects = np.diag(1 / spreads)
-    if random[0] in constant:
-        effects[0, 1:] = -origin[random[0] + 1 :] / spreads[1:] / spreads[0]
+    effects[0, 1:] -= origin[p + 2 :] / spreads[1:] / spreads[0]
     return Standard(
         keep=keep,
-        centre=origin[:fixed],
+        centre=origin[:p],
         fixed=to_fit,
         to_raw=to_raw,
         constant=shift,
-        ols=ols * unit[response],
-        y_centre=y_centre,
-        spread=float(size[response] * np.sqrt(left)),
-        random_centre=origin[fixed + 1 :],
+        ols=ols * unit[p],
+        y_centre=float(origin[p]),
+        spread=float(size[p] * np.sqrt(left)),
+        random_centre=origin[p + 1 :],
         random=effects,
     )
+
+
+def _origin(model: LinearModel, look: _Look) -> Floats:
+    """Return what is taken off the columns [x, y, z]: their means where a constant makes up for them, else zero.
+
+    The same constant among fixed or random columns is left as it is.
+    """
+    p, mean = len(model.fixed), look.total / look.weight
+    origin = np.where(look.constant, 0, mean)
+    if not look.constant[:p].any():
+        origin[: p + 1] = 0
+    if not look.constant[p + 1]:
+        origin[p + 1 :] = 0
+        if model.three:
+            raise EstimationError(
+                f'{model.what}: with three levels the first random column, "{model.random[0]}", must be a constant.',
+                mend="Give three levels a random intercept.",
+            )
+    return np.asarray(origin)
+
+
+def _orthonormal(gram: Floats, keep: NDArray[np.bool_]) -> Floats:
+    """Return the matrix that makes columns with these cross-products orthonormal, (p, kept)."""
+    kept = np.flatnonzero(keep)
+    matrix = np.zeros((len(keep), len(kept)))
+    if len(kept):
+        lower = linalg.cholesky(gram[np.ix_(kept, kept)], lower=True)
+        matrix[kept] = linalg.solve_triangular(lower, np.eye(len(kept)), lower=True).T
+    return matrix
 
 
 @dataclass(frozen=True)
@@ -174,6 +184,11 @@ class _Look:
     several_rows: int
     tops: int
     several_clusters: int
+
+    @property
+    def constant(self) -> NDArray[np.bool_]:
+        """Which columns hold one value, not zero, in all rows that carry weight."""
+        return np.asarray((self.low == self.high) & (self.low != 0))
 
 
 @dataclass(frozen=True)
