@@ -22,8 +22,8 @@ from steelyard.outcome.multilevel.linear_search import (
     MOST_STEPS,
     VANISHES,
     Found,
-    best_start,
     cluster_size,
+    from_afar,
     negligible,
     point_of,
     search,
@@ -177,7 +177,7 @@ def _full_sample(
         point = point_of(free, *near, float(cluster_size(sums)[0]))
         found = search(sums, free, point[np.newaxis], most_steps)
     if near is None or found.failed:
-        found = search(sums, free, best_start(sums, free), most_steps)
+        found = from_afar(sums, free, most_steps)
     if found.failed:
         raise _failure(model, found.failed[0])
     at, steps = _at_its_rank(model, sums, level(sums, free, found.points), most_steps)
@@ -212,7 +212,7 @@ def _solved_columns(
     again = np.array(sorted(found.failed), dtype=np.int64)
     if len(again):
         part = sums.only(again)
-        second = search(part, coordinates, best_start(part, coordinates), most_steps)
+        second = from_afar(part, coordinates, most_steps)
         points = found.points.copy()
         points[again] = second.points
         found = Found(points, found.steps, {int(again[k]): why for k, why in second.failed.items()})
@@ -297,8 +297,8 @@ def _boundary(model: LinearModel, settled: Settled) -> tuple[str, ...]:
 def _failure(model: LinearModel, what: str) -> EstimationError:
     if what == VANISHES:
         mend = (
-            "The level-1 weights add up to too little within clusters; scale them to cluster size, or check for a "
-            "response that is the same in all rows of a cluster."
+            "The random effects can follow every row of the small clusters: leave out a random slope, and scale the "
+            "level-1 weights to cluster size. Or the response is the same in all rows of a cluster."
         )
         return EstimationError(f"{model.what}: {what}.", mend=mend)
     return EstimationError(f"{model.what}: the fit {what}.", mend=SMALLER)

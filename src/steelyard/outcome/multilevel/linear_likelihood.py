@@ -151,15 +151,14 @@ def level(sums: ClusterSums, coordinates: Coordinates, points: Floats) -> Level:
     Coefficients are generalised least squares, and phi the weighted mean of what is left.
     """
     root = coordinates.root(points)
-    inner = root.swapaxes(1, 2)[:, np.newaxis] @ sums.zz @ root[:, np.newaxis]
-    inverse, logdet = _inverse_and_logdet(inner)
-    effect = root[:, np.newaxis] @ inverse @ root.swapaxes(1, 2)[:, np.newaxis]
-    weight = sums.weight
-    pulled = effect @ sums.za
+    cov = (root @ root.swapaxes(1, 2))[:, np.newaxis]
+    # I - S P is (I + S V)^-1: as an inverse it loses no digits where V is large.
+    kept, logdet = _inverse_and_logdet(np.eye(root.shape[1]) + sums.zz @ cov)
+    weight, own, spread = sums.weight, kept @ sums.za, kept @ sums.zz
+    pulled = cov @ own
     cross = sums.gram - _summed(sums.za * weight[:, :, np.newaxis, np.newaxis], pulled)
     twice = np.sum(weight * logdet, axis=1)
-    spread = sums.zz - sums.zz @ effect @ sums.zz
-    own = sums.za - sums.zz @ pulled
+    spread = (spread + spread.swapaxes(2, 3)) / 2
     top = None
     if sums.outer is not None and sums.top_firsts is not None:
         nu = coordinates.top_root(points)[:, np.newaxis] ** 2
@@ -187,22 +186,19 @@ def _summed(left: Floats, right: Floats) -> Floats:
     return np.asarray(left.swapaxes(1, 2) @ right)
 
 
-def _inverse_and_logdet(inner: Floats) -> tuple[Floats, Floats]:
-    """Return ``(I + A)^-1`` and ``log|I + A|`` for positive semidefinite (..., r, r) ``A``."""
-    r = inner.shape[-1]
-    if r == 0:
-        return inner, np.zeros(inner.shape[:-2])
-    if r == 1:
-        return 1 / (1 + inner), np.log1p(inner[..., 0, 0])
-    whole = inner + np.eye(r)
-    if r == 2:
-        a, b, d = whole[..., 0, 0], whole[..., 0, 1], whole[..., 1, 1]
-        det = a * d - b * b
-        inverse = np.empty_like(whole)
+def _inverse_and_logdet(matrix: Floats) -> tuple[Floats, Floats]:
+    """Return inverses and logarithms of the determinants, which are positive, of (..., q, q) matrices."""
+    q = matrix.shape[-1]
+    if q == 1:
+        return 1 / matrix, np.log(matrix[..., 0, 0])
+    if q == 2:
+        a, b, c, d = matrix[..., 0, 0], matrix[..., 0, 1], matrix[..., 1, 0], matrix[..., 1, 1]
+        det = a * d - b * c
+        inverse = np.empty_like(matrix)
         inverse[..., 0, 0], inverse[..., 1, 1] = d / det, a / det
-        inverse[..., 0, 1] = inverse[..., 1, 0] = -b / det
+        inverse[..., 0, 1], inverse[..., 1, 0] = -b / det, -c / det
         return inverse, np.log(det)
-    return np.asarray(np.linalg.inv(whole)), np.asarray(np.linalg.slogdet(whole)[1])
+    return np.asarray(np.linalg.inv(matrix)), np.asarray(np.linalg.slogdet(matrix)[1])
 
 
 def solved(matrix: Floats, right: Floats) -> Floats:

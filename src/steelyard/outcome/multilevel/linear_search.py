@@ -19,7 +19,7 @@ Floats = NDArray[np.float64]
 Integers = NDArray[np.int64]
 
 # Most steps of a search, and most halvings of a step.
-MOST_STEPS = 100
+MOST_STEPS = 200
 MOST_HALVINGS = 40
 # Gain in log-likelihood a unit of weight, below which the step that promises it is the last.
 LAST_GAIN = 1e-20
@@ -30,7 +30,7 @@ ROUNDING = 1e-12
 # A variance that adds less than this share to that of a cluster's mean is zero.
 NEGLIGIBLE = 1e-8
 # Variances between clusters, relative to that within, past which the latter is vanishing.
-RUNAWAY = 1e10
+RUNAWAY = 1e7
 # Slope at the edge, a unit of weight and relative to a cluster's size, past which the edge is left.
 EDGE_SLOPE = 1e-9
 # Why a column has no solution where the weights leave nothing to vary within clusters.
@@ -39,6 +39,7 @@ VANISHES = "the variance within clusters goes to zero"
 MOST_RETURNS = 4
 # Starting variances between clusters, relative to that within.
 STARTS = (0.01, 0.1, 0.5, 2.0)
+TOP_STARTS = (0.02, 0.5)
 # Bytes worked on at a time.
 COLUMNS_AT_A_TIME = 2**22
 
@@ -71,13 +72,31 @@ def search(sums: ClusterSums, coordinates: Coordinates, points: Floats, most_ste
     return Found(np.concatenate([p.points for p in parts]), np.concatenate([p.steps for p in parts]), failed)
 
 
-def best_start(sums: ClusterSums, coordinates: Coordinates) -> Floats:
-    """Return the likeliest of a few starting points of each column, (K, m), for full coordinates."""
+def from_afar(sums: ClusterSums, coordinates: Coordinates, most_steps: int) -> Found:
+    """Return the best of searches from several starting points, for full coordinates.
+
+    A random intercept of two levels is searched for from the likeliest of them; more variances can have more than
+    one peak, so there every one is followed.
+    """
     count, q = len(sums.size), len(coordinates.basis)
-    starts = [np.tile(_point(coordinates, share * np.eye(q), share), (count, 1)) for share in STARTS]
-    values = np.array([level(sums, coordinates, start).value for start in starts])
-    best = np.argmax(np.nan_to_num(values, nan=-np.inf), axis=0)
-    return np.array([starts[b][k] for k, b in enumerate(best)])
+    pairs = [(own, own) for own in STARTS]
+    if coordinates.top:
+        pairs = [(own, top) for own in TOP_STARTS for top in TOP_STARTS]
+    starts = np.array([_point(coordinates, own * np.eye(q), top) for own, top in pairs])
+    if coordinates.size == 1:
+        heights = np.array([level(sums, coordinates, np.tile(s, (count, 1))).value for s in starts])
+        best = np.argmax(np.nan_to_num(heights, nan=-np.inf), axis=0)
+        return search(sums, coordinates, starts[best], most_steps)
+    ends = [search(sums, coordinates, np.tile(s, (count, 1)), most_steps) for s in starts]
+    heights = np.array([level(sums, coordinates, end.points).value for end in ends])
+    for height, end in zip(heights, ends, strict=True):
+        height[list(end.failed)] = -np.inf
+    best = np.argmax(np.nan_to_num(heights, nan=-np.inf), axis=0)
+    return Found(
+        np.array([ends[b].points[k] for k, b in enumerate(best)]),
+        np.array([ends[b].steps[k] for k, b in enumerate(best)]),
+        {k: ends[b].failed[k] for k, b in enumerate(best) if k in ends[b].failed},
+    )
 
 
 def point_of(coordinates: Coordinates, cov: Floats, top: float, size: float) -> Floats:

@@ -22,7 +22,7 @@ Integers = NDArray[np.int64]
 # Rows whose products are formed at a time, unless one cluster has more.
 ROWS_AT_A_TIME = 4096
 # Bytes of cluster sums held at a time.
-SUMS_AT_A_TIME = 2**28
+SUMS_AT_A_TIME = 2**26
 
 
 @dataclass(frozen=True)
