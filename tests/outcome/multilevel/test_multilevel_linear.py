@@ -21,10 +21,11 @@ from multilevel_samples import (
 
 from steelyard.data.passes import Engine, threads
 from steelyard.errors import EstimationError
-from steelyard.outcome.multilevel import linear_sums
+from steelyard.outcome.multilevel import linear, linear_sums
 from steelyard.outcome.multilevel.linear import fit_linear
 from steelyard.outcome.multilevel.linear_curvature import derivatives
 from steelyard.outcome.multilevel.linear_likelihood import Coordinates, level
+from steelyard.outcome.multilevel.linear_search import search
 from steelyard.outcome.multilevel.linear_standard import standard
 from steelyard.outcome.multilevel.linear_sums import cluster_sums
 from steelyard.outcome.multilevel.nested import Nested
@@ -301,6 +302,42 @@ def test_replicates_reach_zero_variance_as_well():
         alone = fit_linear(MODELS[2, 0], ENGINE, [own])
         np.testing.assert_allclose(fit.values[:, k], alone.values[:, 0], rtol=1e-8, atol=1e-10)
     assert fit.values[3, 0] == 0 and fit.values[3, 3] > 0
+
+
+@pytest.mark.parametrize("levels", [2, 3])
+def test_search_leaves_an_edge_where_the_slope_leads_away(levels):
+    run, model = sample(levels=levels, slopes=1, clusters=60, tops=12), MODELS[levels, 1]
+    fit = fit_linear(model, ENGINE, [run])
+    assert not fit.boundary
+    sums = cluster_sums("test", fit.standard, ENGINE, [run], np.arange(1))
+    coordinates = Coordinates(np.eye(2), 2, levels == 3)
+    # No variance at all has no slope in these coordinates; nor, by itself, has a part that is zero.
+    nothing = np.zeros((1, coordinates.size))
+    one_row, no_top = nothing.copy(), nothing.copy()
+    one_row[0, 0] = 1
+    no_top[0, [0, 2]] = 1
+    for start in (nothing, one_row, no_top):
+        found = search(sums, coordinates, start, 200)
+        assert found.failed == {}
+        value = level(sums, coordinates, found.points).value - sums.size * np.log(fit.standard.spread)
+        assert value[0] == pytest.approx(fit.log_likelihood[0], rel=1e-12)
+
+
+def test_column_that_fails_near_the_full_sample_is_searched_from_afar(monkeypatch):
+    run, model = sample(slopes=1, clusters=40, columns=4), MODELS[2, 1]
+    plain = fit_linear(model, ENGINE, [run])
+
+    def failing(sums, coordinates, points, most_steps):
+        found = search(sums, coordinates, points, most_steps)
+        if len(points) == 3:
+            found.points[1] = np.nan
+            found.failed[1] = "made to fail"
+        return found
+
+    monkeypatch.setattr(linear, "search", failing)
+    again = fit_linear(model, ENGINE, [run])
+    assert again.failed == {}
+    np.testing.assert_allclose(again.values, plain.values, rtol=1e-8)
 
 
 def test_some_clusters_of_one_are_fine_and_all_of_one_are_refused():
