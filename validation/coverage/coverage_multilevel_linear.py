@@ -1,6 +1,6 @@
 """Coverage of 95% intervals of a weighted linear multilevel model under sampling that is informative at both levels.
 
-    python validation/coverage/coverage_multilevel_linear.py [--samples 1000]
+    python validation/coverage/coverage_multilevel_linear.py [--samples 1000] [--strong]
 
 A population of clusters is made once. Clusters are drawn with chances that fall with their own effect, rows
 within with chances that fall with their residual, so that a fit without weights is biased. For each parameter:
@@ -8,12 +8,17 @@ its value in the population (the same model fitted to all of it), then for weigh
 scaling of the level-1 weights: bias over the Monte Carlo standard deviation, and for the weighted fits mean
 linearized standard error over that deviation, and the share of intervals that hold the value. Monte Carlo error
 of a share of 0.95: 0.007 for 1,000.
+
+Variances are where few rows a cluster show: the residual variance is biased by about the share 1 / rows of a
+cluster times how informative the rows' sampling is, however many clusters there are. ``--strong`` draws fewer
+rows, fewer clusters, and far more informatively, so that this can be seen.
 """
 
 from __future__ import annotations
 
 import argparse
 from concurrent.futures import ProcessPoolExecutor
+from functools import partial
 
 import numpy as np
 from scipy import stats
@@ -26,7 +31,8 @@ from steelyard.outcome.multilevel.nested import Nested
 from steelyard.outcome.multilevel.scaling import scaled
 
 CLUSTERS, MEMBERS = 3000, 200
-SAMPLED, TAKEN = 100, 20
+# Clusters and rows in each that are drawn on average, and how chances fall with the cluster's effect and the residual.
+USUAL, STRONG = (200, 40, 0.4, 0.2), (100, 20, 0.7, 0.5)
 MODEL = LinearModel(("Intercept", "x", "exposed"), ("Intercept",), ("cluster",), "the model")
 WAYS = ("no weights", "size", "effective", "none")
 
@@ -57,17 +63,18 @@ def run_of(rows: np.ndarray, sizes: np.ndarray, row_weight: np.ndarray, own_weig
     )
 
 
-def one_sample(seed: int) -> list[tuple[np.ndarray, np.ndarray]]:
+def one_sample(setting: tuple[int, int, float, float], seed: int) -> list[tuple[np.ndarray, np.ndarray]]:
     """Return estimates and standard errors for each way of weighting: all five parameters."""
     rng = np.random.default_rng(seed)
-    chance = np.exp(-0.7 * PEOPLE["own"])
-    chance = SAMPLED * chance / chance.sum()
+    clusters, members, by_own, by_residual = setting
+    chance = np.exp(-by_own * PEOPLE["own"])
+    chance = clusters * chance / chance.sum()
     chosen = np.flatnonzero(rng.random(CLUSTERS) < chance)
     rows, sizes, weights = [], [], []
     for j in chosen:
         inside = np.arange(j * MEMBERS, (j + 1) * MEMBERS)
-        likely = np.exp(-0.5 * PEOPLE["residual"][inside])
-        likely = TAKEN * likely / likely.sum()
+        likely = np.exp(-by_residual * PEOPLE["residual"][inside])
+        likely = members * likely / likely.sum()
         taken = rng.random(MEMBERS) < likely
         rows.append(inside[taken])
         sizes.append(int(taken.sum()))
@@ -97,14 +104,16 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--samples", type=int, default=1000)
     parser.add_argument("--workers", type=int, default=2)
+    parser.add_argument("--strong", action="store_true")
     arguments = parser.parse_args()
+    setting = STRONG if arguments.strong else USUAL
     every = np.arange(CLUSTERS * MEMBERS)
     whole = run_of(every, np.full(CLUSTERS, MEMBERS), np.ones(len(every)), np.ones(CLUSTERS))
     fit = fit_linear(MODEL, Engine(), [whole])
     with ProcessPoolExecutor(arguments.workers) as pool:
-        runs = list(pool.map(one_sample, range(arguments.samples), chunksize=10))
-    reach = stats.t.ppf(0.975, SAMPLED - 1)
-    print(f"{arguments.samples} samples of about {SAMPLED} clusters and {SAMPLED * TAKEN:,} rows")
+        runs = list(pool.map(partial(one_sample, setting), range(arguments.samples), chunksize=10))
+    reach = stats.t.ppf(0.975, setting[0] - 1)
+    print(f"{arguments.samples} samples of about {setting[0]} clusters and {setting[0] * setting[1]:,} rows")
     print(
         "parameter                        weights     population     mean   bias/sd   se/sd   coverage (MC error)"
     )
