@@ -25,6 +25,7 @@ VarianceMethod = Literal[
     "linearization", "jackknife", "brr", "fay", "bootstrap", "successive-difference", "supplied"
 ]
 Centre = Literal["full-sample", "replicate-mean"]
+Scaling = Literal["size", "effective", "none"]
 PropensityStatus = Literal["estimated", "known"]
 Scalar = str | int | float | bool
 
@@ -188,13 +189,56 @@ class Balance:
 
 
 @dataclass(frozen=True, kw_only=True)
+class Multilevel:
+    """An outcome model with random effects of clusters.
+
+    ``clusters`` are one or two of the design's clusters, the lowest first: an intercept varies between them.
+    ``slopes`` are numeric columns, or "exposure", whose effect varies between the lowest. ``row_weight`` is the
+    column of the rows' conditional weights and ``cluster_weights`` those of the clusters, in the order of
+    ``clusters``; without them all are made from the overall weight. ``scaling`` is what the rows' weights are
+    scaled to within clusters; of several the first is the answer and the others stand beside it.
+    """
+
+    clusters: tuple[str, ...]
+    slopes: tuple[str, ...] = ()
+    row_weight: str | None = None
+    cluster_weights: tuple[str, ...] = ()
+    scaling: tuple[Scaling, ...] = ("size",)
+
+    def __post_init__(self) -> None:
+        settle(self, "outcome.multilevel")
+        if not 1 <= len(self.clusters) <= 2 or len(set(self.clusters)) != len(self.clusters):
+            raise PlanError(
+                f"outcome.multilevel.clusters names {', '.join(self.clusters) or 'nothing'}.",
+                mend="Name one column of clusters, or two, the lowest first.",
+            )
+        if (self.row_weight is None) != (not self.cluster_weights):
+            raise PlanError(
+                "outcome.multilevel gives weights for some levels and not for others.",
+                mend="Give row_weight and one of cluster_weights for each of clusters, or none of them.",
+            )
+        if self.cluster_weights and len(self.cluster_weights) != len(self.clusters):
+            raise PlanError(
+                f"outcome.multilevel.cluster_weights names {len(self.cluster_weights)} column(s) for "
+                f"{len(self.clusters)} level(s) of clusters.",
+                mend="Give one for each of clusters, in their order.",
+            )
+        if not self.scaling or len(set(self.scaling)) != len(self.scaling):
+            raise PlanError(
+                "outcome.multilevel.scaling is empty or names one twice.",
+                mend="Name one or more of size, effective, none; the first is the answer.",
+            )
+
+
+@dataclass(frozen=True, kw_only=True)
 class Outcome:
-    """One outcome: its column, its family, the measure of effect, and covariates to adjust for."""
+    """One outcome: its column, its family, the measure of effect, covariates, and clusters that vary."""
 
     name: str
     family: Family = "gaussian"
     measure: Measure = "difference"
     covariates: str = ""
+    multilevel: Multilevel | None = None
 
     def __post_init__(self) -> None:
         settle(self)
@@ -202,6 +246,11 @@ class Outcome:
             raise PlanError(
                 f'outcome "{self.name}" asks for an odds ratio of a {self.family} outcome.',
                 mend='Odds need family = "binomial"; for other outcomes ask for "difference" or "ratio".',
+            )
+        if self.multilevel is not None and (self.family, self.measure) != ("gaussian", "difference"):
+            raise PlanError(
+                f'outcome "{self.name}" asks for a multilevel model of a {self.family} outcome by its {self.measure}.',
+                mend='Multilevel models are linear so far: family = "gaussian" and measure = "difference".',
             )
 
 
@@ -289,15 +338,24 @@ class Plan:
             )
         if not self.outcome:
             raise PlanError("The plan has no outcome.", mend="Add at least one [[outcome]] with a name.")
-        seen: set[tuple[str, str, str]] = set()
+        seen: set[tuple[str, str, str, str]] = set()
         for outcome in self.outcome:
-            key = (outcome.name, outcome.measure, outcome.covariates)
+            key = (outcome.name, outcome.measure, outcome.covariates, str(outcome.multilevel))
             if key in seen:
                 raise PlanError(
                     f'The plan lists outcome "{outcome.name}" with measure "{outcome.measure}" twice.',
-                    mend="Remove one, or give it another measure or covariates.",
+                    mend="Remove one, or give it another measure, covariates or clusters.",
                 )
             seen.add(key)
+            levels = () if outcome.multilevel is None else outcome.multilevel.clusters
+            strange = [name for name in levels if name not in self.design.clusters]
+            stages = [self.design.clusters.index(name) for name in levels if name in self.design.clusters]
+            if strange or stages != sorted(stages, reverse=True):
+                raise PlanError(
+                    f'The multilevel model of outcome "{outcome.name}" names clusters {", ".join(levels)}; the design '
+                    f"has {', '.join(self.design.clusters) or 'none'}.",
+                    mend="Name stages of design.clusters, the lowest first: clusters then never straddle PSUs.",
+                )
 
 
 def read_plan(path: str | Path) -> dict[str, Any]:

@@ -46,6 +46,7 @@ from steelyard.results.effects import effect_results, sensitivity_of
 from steelyard.results.estimates import EstimateResults
 from steelyard.results.groups import Groups, groups
 from steelyard.results.inference import Inference, linearized
+from steelyard.results.multilevel import multilevel_results
 from steelyard.results.overlap import overlap_of, overlap_warnings
 from steelyard.results.replication import Replication, replication, turns
 from steelyard.results.statistic import domain_frame, quantiles_asked, replicate_statistic
@@ -150,6 +151,7 @@ class Study(Plan):
         if again is not None and linear is not None:
             second = _both(as_asked, linear, by_linearization(self, design), len(self.outcome))
         known = self.variance.propensity == "known"
+        levels = multilevel_results(found.effects, inference, how.df, self.variance.confidence)
         told = (
             *rows.warnings,
             *design.notes,
@@ -157,6 +159,7 @@ class Study(Plan):
             *(() if again is None else (*again.found.scheme.notes, *again.found.warnings())),
             *overlap_warnings(overlap),
             *balance_warnings(balance, how.df),
+            *(note for results in levels for note in results.notes),
         )
         for text in told:
             python_warnings.warn(text, SteelyardWarning, stacklevel=2)
@@ -178,6 +181,7 @@ class Study(Plan):
             variance=how,
             beside=None if second is None else second[known],
             beside_known=None if second is None else second[1],
+            multilevel=levels,
             sensitivity=sensitivity_of(
                 self, first[known], np.sqrt(outcomes.variance.mean(axis=0)), _ratios(self, inference)
             ),

@@ -270,6 +270,7 @@ def made_answer(minimum=10, **changes):
         variance=VarianceMade("linearization", "linearized", 260.0, 280, 20),
         beside=None,
         beside_known=None,
+        multilevel=(),
         sensitivity=pd.DataFrame(
             {
                 "outcome": [o.name for o in plan.outcome],

@@ -5,11 +5,15 @@ from __future__ import annotations
 import re
 from dataclasses import replace
 
+import numpy as np
+import pandas as pd
 import pytest
 from report_answers import made_answer, made_plan
 
 from steelyard.plan import Design, Exposure, Outcome, Variance
 from steelyard.report.methods import REFERENCES, methods
+from steelyard.results.estimates import EstimateResults
+from steelyard.results.multilevel import MultilevelResults
 from steelyard.results.variance_made import VarianceMade
 
 PLAIN = Exposure(formula="piped ~ urban")
@@ -116,3 +120,20 @@ def test_a_test_that_was_not_done_is_not_claimed():
 def test_only_ratios_speak_of_logarithms():
     text, _ = told(outcome=(Outcome(name="a"), Outcome(name="b"), Outcome(name="c")))
     assert "made on the logarithm" not in text
+
+
+def test_multilevel_models_are_said_with_their_references():
+    parameters = EstimateResults(np.array([0.1]), np.eye(1), ["exposure"], 260.0)
+    frame = pd.DataFrame({"scaling": ["size", "none"], "effect": [0.1, 0.2], "effect_se": [0.1, 0.1]})
+    results = MultilevelResults("score", {"school": 160}, parameters, frame, (0.1, 0.1), ())
+    answer = replace(made_answer(plan=made_plan()), multilevel=(results,))
+    paragraphs, references = methods(answer)
+    assert (
+        "For score the effect is the exposure's coefficient in a linear mixed model with random effects of school"
+        in paragraphs[2]
+    )
+    assert (
+        "scaled to cluster size and nothing (Pfeffermann et al. 1998; Rabe-Hesketh & Skrondal 2006)."
+        in paragraphs[2]
+    )
+    assert any(reference.startswith("Rabe-Hesketh") for reference in references)

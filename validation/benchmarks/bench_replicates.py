@@ -137,10 +137,9 @@ def speed(prepared, x, a, weight, repeats: int) -> None:
     eighty = statistics.median(seconds["80 replicates, all again"])
     print(f"80 replicates / logit          {eighty / logit:.3f}  (wanted: at most 0.5)")
     if glum is not None:
-        one = statistics.median(seconds[f"one glum fit, of {GLUM_FITS}"])
-        print(
-            f"80 glum fits, scaled up / 80 replicates   {REPLICATES * one / eighty:.1f}  (wanted: at least 25)"
-        )
+        for name in (ONE_GLUM, ONE_GLUM_SHARP):
+            one = statistics.median(seconds[name])
+            print(f"80 x {name} / 80 replicates   {REPLICATES * one / eighty:.1f}  (wanted: at least 25)")
 
 
 def jackknife(prepared) -> None:

@@ -7,7 +7,7 @@ outside it still count as members of their strata and PSUs: ``Units`` remembers 
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 import pyarrow as pa
@@ -128,6 +128,8 @@ class Rows:
     unit_of : callable
         From a run of the extract that holds the design's columns to the unit of each row in the last stage, (n,).
     replicates : columns of the extract that ``Block.replicates`` holds
+    carried : mapping
+        Columns of multilevel models, weights of levels and slopes -> place in ``Block.columns``.
     total : int
         Rows in the extract.
     exclusions : mapping
@@ -149,6 +151,7 @@ class Rows:
     warnings: tuple[str, ...] = ()
     unit_of: Callable[[pa.Table], Integers] | None = None
     replicates: tuple[str, ...] = ()
+    carried: Mapping[str, int] = field(default_factory=dict)
 
     def __len__(self) -> int:
         return sum(len(block) for block in self.blocks)

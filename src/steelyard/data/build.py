@@ -20,7 +20,7 @@ from steelyard.data.checkup import Checkup, conclude
 from steelyard.data.coding import UnitCoder, UnitCollector
 from steelyard.data.formula import DesignBuilder, learn
 from steelyard.data.passes import Engine
-from steelyard.data.reading import Chunk, Reader, reader
+from steelyard.data.reading import Chunk, Reader, carried_columns, reader
 from steelyard.data.source import READ_ROWS, Extract
 from steelyard.data.tally import Tally
 from steelyard.data.terms import TermPlan, plan_terms
@@ -68,6 +68,7 @@ def build_rows(extract: Extract, plan: Plan, engine: Engine, block_rows: int = 8
         units=coder.units,
         unit_of=coder.encode,
         replicates=plan_reader.replicates,
+        carried=assembly.carried(),
         total=tally.rows,
         exclusions={plan_reader.reasons[k]: n for k, n in sorted(tally.reasons.items())},
         warnings=tuple(_constant_warnings(plan_reader, tally)),
@@ -195,6 +196,7 @@ class _Assembly:
         """
         names = [*self.exposure.names, *self.terms.extra_names]
         names += [f"outcome {name}" for name in self._outcomes()]
+        names += [f"carried {name}" for name in self._carried()]
         place = self._places()
         models: list[Model | None] = []
         for builder in self.covariates:
@@ -225,10 +227,20 @@ class _Assembly:
     def _outcomes(self) -> tuple[str, ...]:
         return tuple(dict.fromkeys(outcome.name for outcome in self.plan_reader.plan.outcome))
 
+    def _carried(self) -> tuple[str, ...]:
+        return tuple(name for name in carried_columns(self.plan_reader.plan) if name not in self._outcomes())
+
+    def carried(self) -> dict[str, int]:
+        """Return the places of the columns that multilevel models read as they are."""
+        first = len(self.exposure.names) + len(self.terms.extra_names)
+        place = {name: first + k for k, name in enumerate((*self._outcomes(), *self._carried()))}
+        return {name: place[name] for name in carried_columns(self.plan_reader.plan)}
+
     def build(self, values: Mapping[str, Values], n: int) -> Floats:
         """Return the (n, C) columns of complete rows."""
         parts = [self.exposure.build(values, n), self.terms.extra(values, n)]
-        parts += [np.asarray(values[name], dtype=np.float64)[:, np.newaxis] for name in self._outcomes()]
+        as_they_are = (*self._outcomes(), *self._carried())
+        parts += [np.asarray(values[name], dtype=np.float64)[:, np.newaxis] for name in as_they_are]
         parts += [builder.build(values, n)[:, own] for builder, own in self._own_columns()]
         return np.concatenate(parts, axis=1)
 

@@ -202,7 +202,15 @@ def reader(extract: Extract, plan: Plan) -> Reader:
     complete = dict.fromkeys((*formula.columns, *outcomes))
     for other in covariates:
         complete |= dict.fromkeys(other.columns if other else ())
-    complete |= dict.fromkeys(plan.balance.columns)
+    carried = carried_columns(plan)
+    extract.require(carried)
+    for name in carried:
+        if kinds[name] == "category":
+            raise PlanError(
+                f'The column "{name}" of a multilevel model holds text.',
+                mend="Weights and slopes are numbers; a category may vary through columns of 0 and 1.",
+            )
+    complete |= dict.fromkeys((*plan.balance.columns, *carried))
     refuse_other_kinds(extract, list(complete), "a model")
     unknown = ", ".join(domain.columns)
     reasons = (
@@ -213,6 +221,17 @@ def reader(extract: Extract, plan: Plan) -> Reader:
         *(f"{name} missing" for name in complete),
     )
     return Reader(plan, extract, formula, covariates, domain, tuple(complete), reasons, replicates)
+
+
+def carried_columns(plan: Plan) -> tuple[str, ...]:
+    """Return the columns that multilevel models read as they are: weights of levels, and slopes."""
+    names: dict[str, None] = {}
+    for outcome in plan.outcome:
+        if outcome.multilevel is not None:
+            model = outcome.multilevel
+            named = (*model.slopes, *([model.row_weight] if model.row_weight else []), *model.cluster_weights)
+            names |= dict.fromkeys(name for name in named if name != "exposure")
+    return tuple(names)
 
 
 def _equal(values: Values, level: object) -> Bools:

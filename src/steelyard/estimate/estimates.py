@@ -39,7 +39,8 @@ class Estimates:
         "sampling": 1. "combined": the balancing weight as used. "pure": the estimand's weight of the
         propensity, neither stabilized nor trimmed.
     of_nuisance : (P, k) or None
-        Derivatives of estimates that are functions of the nuisance parameters themselves.
+        Derivatives of estimates that are functions of the nuisance parameters themselves, or that have worked out
+        for themselves how they hang on them.
     known : whether ``c`` is taken as known, so that the nuisance parameters bring nothing
     """
 

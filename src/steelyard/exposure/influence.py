@@ -71,7 +71,7 @@ def joint_influence(
         own[starts[place[id(e.own)]] : starts[place[id(e.own)] + 1], columns] = e.combine
         if not e.known and e.weighing != "sampling":
             through[:, columns] += drifts[place[id(e.own)]].T @ e.combine
-        if e.of_nuisance is not None:
+        if not e.known and e.of_nuisance is not None:
             through[:, columns] += e.of_nuisance
         first += len(e.names)
     return JointInfluence(balancing, shared, np.concatenate([balancing.nuisance_combine @ through, own]))

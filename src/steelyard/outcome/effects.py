@@ -11,6 +11,7 @@ from steelyard.exposure.balancing import Balancing
 from steelyard.exposure.group_means import GroupMeans
 from steelyard.exposure.one_pass import sums_in_one_pass
 from steelyard.outcome.contrasts import contrast, outcome_means_asked
+from steelyard.outcome.multilevel.outcome import MultilevelOutcome, multilevel_outcome
 from steelyard.outcome.regression import OutcomeRegression, outcome_regression
 from steelyard.plan import Outcome
 
@@ -26,12 +27,26 @@ class Effects:
         Of the m outcomes, under the combined weights.
     estimates : m Estimates of one effect each, on the scale of the measure's link
     regressions : for each outcome its OutcomeRegression, or None where it has no covariates
+    multilevel : for each outcome its MultilevelOutcome, or None
     """
 
     outcomes: tuple[Outcome, ...]
     means: GroupMeans
     estimates: tuple[Estimates, ...]
     regressions: tuple[OutcomeRegression | None, ...]
+    multilevel: tuple[MultilevelOutcome | None, ...]
+
+    @property
+    def failed(self) -> dict[int, str]:
+        """Columns of weights under which an outcome's model has no solution, and why."""
+        failed: dict[int, str] = {}
+        for model in (*self.regressions, *self.multilevel):
+            if model is not None:
+                failed = {
+                    **(model.failed if isinstance(model, MultilevelOutcome) else model.fit.failed),
+                    **failed,
+                }
+        return failed
 
 
 def effects(
@@ -59,18 +74,31 @@ def effects(
         kernels = {"outcomes": asked.kernel}
         sums = sums_in_one_pass("outcomes: means", kernels, balancing, engine, rows.blocks)
         means = asked.made_of(sums["outcomes"])
-    estimates, regressions = [], []
+    estimates, regressions, multilevel = [], [], []
     for place, (outcome, name, model) in enumerate(
         zip(outcomes, means.names, rows.outcome_models, strict=True)
     ):
-        before = None if full is None else full.regressions[place]
-        regression = None
-        if before is not None:
-            regression = before.under(balancing, engine, rows.blocks)
-        elif model is not None:
-            regression = outcome_regression(
-                outcome, name, rows.outcomes[place], model, balancing, engine, rows.blocks
+        regression, levels = None, None
+        if model is not None:
+            before = None if full is None else full.regressions[place]
+            regression = (
+                outcome_regression(outcome, name, rows.outcomes[place], model, balancing, engine, rows.blocks)
+                if before is None
+                else before.under(balancing, engine, rows.blocks)
             )
+        if outcome.multilevel is not None:
+            known = None if full is None else full.multilevel[place]
+            levels = (
+                multilevel_outcome(outcome, name, rows.outcomes[place], model, rows, balancing, engine)
+                if known is None
+                else known.under(balancing, engine)
+            )
+        if levels is not None:
+            estimates.append(levels.effect())
+        elif regression is not None:
+            estimates.append(regression.effect())
+        else:
+            estimates.append(contrast(outcome, place, name, means))
         regressions.append(regression)
-        estimates.append(contrast(outcome, place, name, means) if regression is None else regression.effect())
-    return Effects(outcomes, means, tuple(estimates), tuple(regressions))
+        multilevel.append(levels)
+    return Effects(outcomes, means, tuple(estimates), tuple(regressions), tuple(multilevel))

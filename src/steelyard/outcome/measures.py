@@ -54,4 +54,6 @@ def outcome_label(outcome: Outcome, outcomes: tuple[Outcome, ...]) -> str:
     if len(same) == 1:
         return outcome.name
     adjusted = ", adjusted" if outcome.covariates else ""
+    if outcome.multilevel is not None:
+        adjusted += ", multilevel"
     return f"{outcome.name} ({outcome.measure}{adjusted})"

@@ -28,6 +28,7 @@ from steelyard.report.released_texts import TextRules
 from steelyard.report.suppression import HIDDEN, Mask, is_hidden, small, under, with_complements
 from steelyard.results.answer import Answer
 from steelyard.results.estimates import EstimateResults, JointTest
+from steelyard.results.multilevel import MultilevelResults
 
 EXPOSED_CELLS = ("mean_exposed_before", "mean_exposed_after")
 REFERENCE_CELLS = ("mean_reference_before", "mean_reference_after")
@@ -91,6 +92,7 @@ class Released:
         The columns of effects.csv.
     beside, beside_known : frames
         The same with the linearized variance, where it stands beside that of replicates; else without rows.
+    multilevel : results of multilevel models; none where a group is hidden
     sensitivity : frame
     warnings, notes : texts
         ``notes`` say what was hidden.
@@ -118,6 +120,7 @@ class Released:
     effects_known: pd.DataFrame
     beside: pd.DataFrame
     beside_known: pd.DataFrame
+    multilevel: tuple[MultilevelResults, ...]
     sensitivity: pd.DataFrame
     warnings: tuple[str, ...]
     notes: tuple[str, ...]
@@ -200,6 +203,7 @@ def release(answer: Answer) -> Released:
         effects_known=_effects(answer.effects_known.table, groups_hidden, inside, minimum),
         beside=_beside(answer.beside, groups_hidden, inside, minimum),
         beside_known=_beside(answer.beside_known, groups_hidden, inside, minimum),
+        multilevel=() if groups_hidden else answer.multilevel,
         sensitivity=_covered(answer.sensitivity, groups_hidden, SENSITIVITY_CELLS, text),
         warnings=tuple(texts.released(warning) for warning in answer.warnings),
         notes=_notes(minimum, groups_hidden, int(hidden_rows.sum()), strata),

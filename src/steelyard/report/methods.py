@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 
 from steelyard.plan import Outcome, Plan
+from steelyard.report.multilevel import multilevel_sentence
 from steelyard.report.words import confidence, covariates_of, estimand_name, exposure_name, listed
 from steelyard.results.answer import Answer
 
@@ -33,6 +34,11 @@ REFERENCES = {
     "23(19), 2937–2960.",
     "McCarthy 1969": "McCarthy, P. J. (1969). Pseudo-replication: half samples. Review of the International "
     "Statistical Institute, 37(3), 239–264.",
+    "Pfeffermann et al. 1998": "Pfeffermann, D., Skinner, C. J., Holmes, D. J., Goldstein, H. & Rasbash, J. (1998). "
+    "Weighting for unequal selection probabilities in multilevel models. Journal of the Royal Statistical Society B, "
+    "60(1), 23–40.",
+    "Rabe-Hesketh & Skrondal 2006": "Rabe-Hesketh, S. & Skrondal, A. (2006). Multilevel modelling of complex survey "
+    "data. Journal of the Royal Statistical Society A, 169(4), 805–827.",
     "Rao, Wu & Yue 1992": "Rao, J. N. K., Wu, C. F. J. & Yue, K. (1992). Some recent work on resampling methods for "
     "complex surveys. Survey Methodology, 18(2), 209–217.",
     "VanderWeele & Ding 2017": "VanderWeele, T. J. & Ding, P. (2017). Sensitivity analysis in observational "
@@ -83,7 +89,7 @@ def methods(answer: Answer) -> tuple[list[str], list[str]]:
         for sentences in (
             _weighting(plan, cite),
             _balance(answer, cite),
-            _effects(plan, cite),
+            _effects(answer, cite),
             _variance(answer, cite),
             _sensitivity(answer, cite),
         )
@@ -136,9 +142,10 @@ def _balance(answer: Answer, cite: _Citing) -> list[str]:
     ]
 
 
-def _effects(plan: Plan, cite: _Citing) -> list[str]:
-    plain = [outcome for outcome in plan.outcome if not outcome.covariates]
-    adjusted = [outcome for outcome in plan.outcome if outcome.covariates]
+def _effects(answer: Answer, cite: _Citing) -> list[str]:
+    single = [outcome for outcome in answer.plan.outcome if outcome.multilevel is None]
+    plain = [outcome for outcome in single if not outcome.covariates]
+    adjusted = [outcome for outcome in single if outcome.covariates]
     sentences = []
     if plain:
         kinds = listed(list(dict.fromkeys(outcome.measure.replace("-", " ") for outcome in plain)))
@@ -147,6 +154,9 @@ def _effects(plan: Plan, cite: _Citing) -> list[str]:
             f"For {names} the effect is the {kinds} of the groups' weighted means {cite('Hájek 1971')}."
         )
     sentences += [_regression(outcome) for outcome in adjusted]
+    for results in answer.multilevel:
+        sources = cite("Pfeffermann et al. 1998", "Rabe-Hesketh & Skrondal 2006")
+        sentences.append(f"{multilevel_sentence(results)} {sources}.")
     return sentences
 
 

@@ -12,6 +12,7 @@ from steelyard.report import tables
 from steelyard.report.disclosure import Released, release
 from steelyard.report.figures import Picture, pictures
 from steelyard.report.methods import methods
+from steelyard.report.multilevel import multilevel_tables
 from steelyard.report.numbers import count, thin
 from steelyard.report.record import plan_toml
 from steelyard.report.side_by_side import METHODS, standard_errors_table, variance_in_words
@@ -134,6 +135,7 @@ def _contents(answer: Answer, released: Released) -> dict[str, Any]:
         "methods": paragraphs,
         "references": references,
         "tables": _tables(answer, released),
+        "multilevel": multilevel_tables(released),
         "version": _versions(answer).get("steelyard", ""),
         "plan_text": plan_toml(plan),
         "plan_digest": str(answer.record.get("plan_sha256", "")),

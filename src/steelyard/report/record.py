@@ -33,7 +33,7 @@ def plan_toml(plan: Plan) -> str:
             lines += ["", *_table(name, section)]
         elif _is_table(section):
             for item in section:
-                lines += ["", f"[[{_key(name)}]]", *_pairs(item)]
+                lines += ["", f"[[{_key(name)}]]", *_table(name, item)[1:]]
     return "\n".join(lines).strip() + "\n"
 
 

@@ -9,6 +9,7 @@ import pandas as pd
 from steelyard.data.checkup import Checkup
 from steelyard.plan import Plan
 from steelyard.results.estimates import EstimateResults, JointTest
+from steelyard.results.multilevel import MultilevelResults
 from steelyard.results.variance_made import VarianceMade
 from steelyard.results.weights_file import WeightFile
 
@@ -83,6 +84,7 @@ class Answer:
         How the variance of ``effects``, of balance and of the propensity was made.
     beside, beside_known : EstimateResults or None
         The same effects with the linearized variance, where replicates made the first and both were asked for.
+    multilevel : one MultilevelResults for each outcome with a multilevel model
     sensitivity : frame
         E-values: ``outcome``, ``measure``, ``risk_ratio`` (the ratio the E-value is for, exact or by the
         published approximation), ``risk_ratio_low``, ``risk_ratio_high``, ``e_value``, ``e_value_limit``
@@ -105,6 +107,7 @@ class Answer:
     variance: VarianceMade
     beside: EstimateResults | None
     beside_known: EstimateResults | None
+    multilevel: tuple[MultilevelResults, ...]
     sensitivity: pd.DataFrame
     warnings: tuple[str, ...]
     record: dict[str, object]

@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 from steelyard.estimate.moments import EXPOSED, REFERENCE, Moments
 from steelyard.outcome.effects import Effects
 from steelyard.outcome.measures import SCALES
-from steelyard.plan import Plan
+from steelyard.plan import Outcome, Plan
 from steelyard.results.estimates import EstimateResults
 from steelyard.results.sensitivity import (
     RARE,
@@ -49,7 +49,7 @@ def effect_results(
     estimate = np.where(exponential, np.exp(np.where(exponential, values, 0)), values)
     results.table = pd.DataFrame(
         {
-            "outcome": [o.name for o in effects.outcomes],
+            "outcome": _told_apart(effects.outcomes, names),
             "measure": [o.measure for o in effects.outcomes],
             "estimand": plan.exposure.estimand,
             "domain": plan.data.domain or "all",
@@ -74,6 +74,15 @@ def effect_results(
         }
     )
     return results
+
+
+def _told_apart(outcomes: tuple[Outcome, ...], names: tuple[str, ...]) -> list[str]:
+    """Return the outcomes' names, with what tells them apart where one has the same measure twice."""
+    asked = [(outcome.name, outcome.measure) for outcome in outcomes]
+    return [
+        name if asked.count(pair) > 1 else outcome.name
+        for outcome, name, pair in zip(outcomes, names, asked, strict=True)
+    ]
 
 
 def _back(values: Floats, exponential: NDArray[np.bool_]) -> Floats:

@@ -25,9 +25,10 @@ from steelyard.plan import Outcome, Plan
 class Groups:
     """What a study estimates under some columns of weights.
 
-    ``estimates`` holds, by name, "propensity", "before" and "after" (differences of the terms), "effect 0",
-    "effect 1", ..., "conditions" where the propensity leaves any, and "ratio k" where the risk ratio beside a
-    difference needs no approximation.
+    ``estimates`` holds, by name: "propensity"; "before" and "after" (differences of the terms); "effect 0",
+    "effect 1", ...; "conditions" where the propensity leaves any; for a multilevel outcome "levels k scaling" (all
+    its parameters) and "plain k" (the effect without it); and "ratio k" where the risk ratio beside a difference
+    needs no approximation.
     """
 
     effects: Effects
@@ -86,6 +87,15 @@ def groups(
         "after": after.differences(),
     }
     estimates |= {f"effect {place}": effect for place, effect in enumerate(found.estimates)}
+    for place, levels in enumerate(found.multilevel):
+        if levels is not None:
+            plain = found.regressions[place]
+            estimates[f"plain {place}"] = (
+                contrast(plan.outcome[place], place, levels.name, found.means)
+                if plain is None
+                else plain.effect()
+            )
+            estimates |= {f"levels {place} {scaling}": every for scaling, every in levels.estimates.items()}
     if "conditions" in sums:
         estimates["conditions"] = conditions_of(balancing, sums["conditions"])
     for place in _ratio_places(plan.outcome, found):

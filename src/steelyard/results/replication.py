@@ -129,7 +129,5 @@ def _failures(turn: Turn, *found: Effects) -> dict[int, str]:
     """Return the replicates that have no solution, and why: the propensity's reason goes before an outcome's."""
     by_column = dict(turn.balancing.failed)
     for effects_found in found:
-        for regression in effects_found.regressions:
-            if regression is not None:
-                by_column = {**regression.fit.failed, **by_column}
+        by_column = {**effects_found.failed, **by_column}
     return {turn.first + column - 1: why for column, why in by_column.items()}

@@ -9,18 +9,17 @@ scaling. Nothing here knows what the weights are used for.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Literal, get_args
+from typing import get_args
 
 import numpy as np
 from numpy.typing import NDArray
 
 from steelyard.errors import PlanError
 from steelyard.outcome.multilevel.nested import firsts
+from steelyard.plan import Scaling
 
 Floats = NDArray[np.float64]
 Integers = NDArray[np.int64]
-
-Scaling = Literal["size", "effective", "none"]
 
 
 def scaled(weight: Floats, group: Integers, method: Scaling) -> Floats:

@@ -1,0 +1,211 @@
+"""From the blocks of a study to rows in clusters, with a weight at each level and the balancing weight on the rows.
+
+Rows of one cluster may lie anywhere in the extract; here they stand together. The balancing weight multiplies
+the rows' weights, since that is where the exposure is; a replicate's multiplier belongs to the top-most clusters.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from itertools import pairwise
+
+import numpy as np
+from numpy.typing import NDArray
+
+from steelyard.data.blocks import Model, Rows
+from steelyard.data.units import Units
+from steelyard.exposure.balancing import Balancing
+from steelyard.outcome.multilevel.nested import Nested
+from steelyard.outcome.multilevel.scaling import from_overall, scaled
+from steelyard.plan import Multilevel, Scaling
+
+Floats = NDArray[np.float64]
+Integers = NDArray[np.int64]
+
+# Rows to a run, but for the last top-most cluster's.
+RUN_ROWS = 8192
+
+
+@dataclass(frozen=True)
+class LevelRows:
+    """Rows with sampling weight, sorted by top-most cluster and cluster.
+
+    Attributes
+    ----------
+    order : (n,) int64
+        The place of each row among the rows of all blocks, one after another.
+    count : rows of all blocks
+    y, x, z : (n,), (n, p), (n, q)
+    cluster, top : (n,), (J,) or None
+        As in :class:`Nested`, over all rows.
+    row_weight, cluster_weight, top_weight : (n,), (J,), (T,) or None
+        Before balancing and scaling.
+    sampling : (n,)
+        The overall sampling weight.
+    fixed, random : names of the columns
+    levels : names of the levels, the lowest first
+    from_overall : whether the levels' weights were made from the overall weight
+    """
+
+    order: Integers
+    count: int
+    y: Floats
+    x: Floats
+    z: Floats
+    cluster: Integers
+    top: Integers | None
+    row_weight: Floats
+    cluster_weight: Floats
+    top_weight: Floats | None
+    sampling: Floats
+    fixed: tuple[str, ...]
+    random: tuple[str, ...]
+    levels: tuple[str, ...]
+    from_overall: bool
+
+    @property
+    def outermost(self) -> Integers:
+        """The top-most cluster of each row, (n,)."""
+        return self.cluster if self.top is None else self.top[self.cluster]
+
+    @property
+    def clusters(self) -> int:
+        """How many clusters there are, J."""
+        return len(self.cluster_weight)
+
+    def of_blocks(self, values: Floats) -> Floats:
+        """Return values of the blocks' rows, (count, ...), for the sorted rows."""
+        return values[self.order]
+
+    def to_blocks(self, values: Floats) -> Floats:
+        """Return values of the sorted rows for the blocks' rows, zero for those without sampling weight."""
+        out = np.zeros((self.count, *values.shape[1:]))
+        out[self.order] = values
+        return out
+
+    def unscaled(self, balancing: Floats, multiplier: Floats) -> tuple[Floats, Floats]:
+        """Return the rows' weights before scaling, (n, K), and the top-most clusters' multipliers, (G, K).
+
+        Parameters
+        ----------
+        balancing, multiplier : (n, K)
+            The balancing weight, and what a replicate makes of the sampling weight over that weight. What it does
+            to all rows of a top-most cluster alike belongs to the cluster, the rest to the rows.
+        """
+        outermost = self.outermost
+        firsts = np.flatnonzero(np.diff(outermost, prepend=-1))
+        sizes = np.diff(np.append(firsts, len(outermost)))
+        of_cluster = np.add.reduceat(multiplier, firsts, axis=0) / sizes[:, np.newaxis]
+        shared = of_cluster[outermost]
+        rest = np.divide(multiplier, shared, out=np.ones_like(shared), where=shared != 0)
+        return self.row_weight[:, np.newaxis] * balancing * rest, of_cluster
+
+    def runs(self, unscaled: Floats, of_cluster: Floats, scaling: Scaling) -> list[Nested]:
+        """Return the rows in runs that never split a top-most cluster."""
+        row = scaled(unscaled, self.cluster, scaling)
+        cluster_weight, top_weight = self.cluster_weight[:, np.newaxis], None
+        if self.top is None:
+            cluster_weight = cluster_weight * of_cluster
+        else:
+            assert self.top_weight is not None
+            cluster_weight = scaled(cluster_weight, self.top, scaling)
+            top_weight = self.top_weight[:, np.newaxis] * of_cluster
+        return list(self._cut(row, cluster_weight, top_weight))
+
+    def _cut(self, row: Floats, cluster_weight: Floats, top_weight: Floats | None) -> Iterator[Nested]:
+        edges = np.flatnonzero(np.diff(self.outermost, prepend=-1, append=-1))
+        cuts = [0]
+        for edge in edges[1:].tolist():
+            if edge - cuts[-1] >= RUN_ROWS or edge == edges[-1]:
+                cuts.append(edge)
+        for a, b in pairwise(cuts):
+            first, last = int(self.cluster[a]), int(self.cluster[b - 1]) + 1
+            top, tops = None, None
+            if self.top is not None:
+                assert top_weight is not None
+                low, high = int(self.top[first]), int(self.top[last - 1]) + 1
+                top, tops = self.top[first:last] - low, top_weight[low:high]
+            yield Nested(
+                self.y[a:b],
+                self.x[a:b],
+                self.z[a:b],
+                self.cluster[a:b] - first,
+                top,
+                row[a:b],
+                cluster_weight[first:last],
+                tops,
+            )
+
+
+def level_rows(rows: Rows, asked: Multilevel, place: int, model: Model | None) -> LevelRows:
+    """Return the rows of an outcome's model; ``place`` is the outcome's column, ``model`` its covariates."""
+    columns = np.concatenate([block.columns for block in rows.blocks])
+    exposure = np.concatenate([block.exposure for block in rows.blocks])
+    sampling = np.concatenate([block.weight for block in rows.blocks])
+    unit = np.concatenate([block.unit for block in rows.blocks])
+    stages = _stages(rows.units, asked.clusters)
+    counted = np.flatnonzero(sampling > 0)
+    codes = [stage[unit[counted]] for stage in stages]
+    order = counted[np.lexsort(codes)]
+    cluster_id = stages[0][unit[order]]
+    cluster = _numbered(cluster_id)
+    firsts = np.flatnonzero(np.diff(cluster, prepend=-1))
+    top = None if len(stages) < 2 else _numbered(stages[1][unit[order]])[firsts]
+    covariates = np.ones((len(order), 1)) if model is None else columns[order][:, list(model.index)]
+    names = ("Intercept",) if model is None else model.names
+    slopes = [
+        exposure[order] if name == "exposure" else columns[order, rows.carried[name]] for name in asked.slopes
+    ]
+    s = sampling[order]
+    if asked.row_weight is None:
+        made = from_overall(s[:, np.newaxis], cluster, top)
+        row, cluster_weight = made.row[:, 0], made.cluster[:, 0]
+        top_weight = None if made.top is None else made.top[:, 0]
+    else:
+        row = columns[order, rows.carried[asked.row_weight]]
+        by_level = [columns[order, rows.carried[name]] for name in asked.cluster_weights]
+        cluster_weight = by_level[0][firsts]
+        top_weight = None if top is None else by_level[1][firsts][np.flatnonzero(np.diff(top, prepend=-1))]
+    return LevelRows(
+        order=order,
+        count=len(sampling),
+        y=columns[order, place],
+        x=np.column_stack([covariates, exposure[order]]),
+        z=np.column_stack([np.ones(len(order)), *slopes]),
+        cluster=cluster,
+        top=top,
+        row_weight=row,
+        cluster_weight=cluster_weight,
+        top_weight=top_weight,
+        sampling=s,
+        fixed=(*names, "exposure"),
+        random=("Intercept", *asked.slopes),
+        levels=asked.clusters,
+        from_overall=asked.row_weight is None,
+    )
+
+
+def factors(made: Balancing, rows: Rows) -> tuple[Floats, Floats]:
+    """Return the balancing weights and the multipliers of the sampling weights of all blocks' rows, (N, K) each."""
+    balancing, multipliers = [], []
+    with np.errstate(invalid="ignore", over="ignore"):
+        for block in rows.blocks:
+            balanced = made.rows(block)
+            weight = block.weight[:, np.newaxis]
+            multiplier = np.zeros((len(block), made.count))
+            np.divide(balanced.sampling, weight, out=multiplier, where=weight > 0)
+            multipliers.append(multiplier)
+            balancing.append(np.broadcast_to(balanced.balancing, multiplier.shape))
+    return np.concatenate(balancing), np.concatenate(multipliers)
+
+
+def _stages(units: Units, clusters: Sequence[str]) -> list[Integers]:
+    """Return, for each level, the cluster of every unit of the design's last stage."""
+    stage = {stage.columns[0]: number for number, stage in enumerate(units.stages) if number}
+    return [units.ancestor(stage[name]) for name in clusters]
+
+
+def _numbered(ids: Integers) -> Integers:
+    """Return codes 0, 1, ... of runs of equal ids."""
+    return np.cumsum(np.diff(ids, prepend=ids[:1]) != 0)

@@ -1,0 +1,92 @@
+"""Multilevel outcome models as tables: parameters, the effect without the model, scalings side by side."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from steelyard.report.disclosure import Released
+from steelyard.report.numbers import count, p_value, significant
+from steelyard.report.tables import Table, cell, with_decimals
+from steelyard.report.words import listed
+from steelyard.results.multilevel import MultilevelResults
+
+SCALINGS = {
+    "size": "cluster size",
+    "effective": "effective cluster size",
+    "none": "nothing: weights as they are",
+}
+
+
+def multilevel_tables(released: Released) -> list[Table]:
+    """Return the tables of every multilevel model."""
+    tables = []
+    for number, results in enumerate(released.multilevel, start=1):
+        tables.append(_parameters(number, results))
+        tables.append(_effects(number, results))
+    return tables
+
+
+def _parameters(number: int, results: MultilevelResults) -> Table:
+    frame = results.parameters.table
+    rows = tuple(
+        (
+            str(record["name"]),
+            cell(record["estimate"], significant),
+            cell(record["std_error"], significant),
+            cell(record["ci_low"], significant),
+            cell(record["ci_high"], significant),
+            cell(record["p_value"], p_value) if _is_coefficient(str(record["name"])) else "",
+        )
+        for record in frame.to_dict("records")
+    )
+    counted = listed([f"{count(n)} clusters of {name}" for name, n in results.clusters.items()])
+    return Table(
+        f"multilevel-{number}",
+        f"Multilevel model of {results.outcome}",
+        ("Parameter", "Estimate", "SE", "from", "to", "p"),
+        rows,
+        groups=(("", 3), ("Interval", 2), ("", 1)),
+        note=f"Pseudo-maximum likelihood on {counted}; rows' weights, times the balancing weight, scaled to "
+        f"{SCALINGS[str(results.scalings['scaling'].iloc[0])]}. No test is shown of a variance: it cannot be negative.",
+    )
+
+
+def _is_coefficient(name: str) -> bool:
+    return not name.startswith(("variance", "covariance", "intraclass"))
+
+
+def _effects(number: int, results: MultilevelResults) -> Table:
+    frame = results.scalings
+    named = [name for name in frame if name not in ("scaling", "effect") and not name.endswith("_se")]
+    decimals = with_decimals(4)
+    first = ("without the multilevel model", decimals(results.plain[0]), decimals(results.plain[1]))
+    rows = [(*first, *("" for _ in named))]
+    for record in frame.to_dict("records"):
+        rows.append((*_with(record, decimals), *(significant(record[name]) for name in named)))
+    return Table(
+        f"multilevel-effects-{number}",
+        f"The effect on {results.outcome} with and without the multilevel model, by what weights are scaled to",
+        ("Model; weights scaled to", "Effect", "SE", *(_capital(str(name)) for name in named)),
+        tuple(rows),
+        note="The model compares rows of the same cluster more than it compares clusters; where clusters differ in "
+        "ways that the covariates do not hold, the two effects part. Scalings that give different answers say that "
+        "clusters are small or weights within them unequal.",
+    )
+
+
+def _with(record: dict[str, Any], decimals: Any) -> tuple[str, str, str]:
+    return SCALINGS[str(record["scaling"])], decimals(record["effect"]), decimals(record["effect_se"])
+
+
+def _capital(text: str) -> str:
+    return text[:1].upper() + text[1:]
+
+
+def multilevel_sentence(results: MultilevelResults) -> str:
+    """Return what the methods say of one model, without its references and full stop."""
+    scalings = [SCALINGS[str(scaling)].split(":")[0] for scaling in results.scalings["scaling"]]
+    return (
+        f"For {results.outcome} the effect is the exposure's coefficient in a linear mixed model with random effects "
+        f"of {listed(list(results.clusters))}, fitted by pseudo-maximum likelihood with a weight at each level; the "
+        f"balancing weight multiplied the rows' weights, which were scaled to {listed(scalings)}"
+    )
