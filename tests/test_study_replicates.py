@@ -111,6 +111,18 @@ def test_a_colleague_gets_the_standard_errors_back_from_the_weight_file(method):
     np.testing.assert_allclose(answer.effects.cov_params(), again, rtol=1e-5)
 
 
+def test_the_paragraph_for_colleagues_says_the_factor_that_gives_the_variance():
+    answer = study(variance=Variance(method="jackknife")).run(FRAME)
+    text = answer.variance.usage(())
+    # Two PSUs a stratum: every a_r is one half, and nothing is left to look up.
+    assert "V = a Σ (T_r − T)², with a = 0.5;" in text
+    assert "12 replicates, overall factor 0.5, deviations from the full-sample estimate" in text
+    unequal = study(variance=Variance(method="jackknife")).run(extract(strata=2, areas=3).iloc[:-10])
+    assert set(unequal.variance.factors) == {2 / 3}
+    held = study(variance=Variance(method="fay", propensity="known")).run(FRAME).variance.usage(())
+    assert "full sample's propensity was kept" in held
+
+
 @pytest.mark.parametrize("method", ["jackknife", "bootstrap"])
 def test_a_domain_varies_with_the_whole_design(method):
     inside = FRAME["x1"] > -0.6

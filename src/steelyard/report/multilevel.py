@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from typing import Any
-
 from steelyard.report.disclosure import Released
 from steelyard.report.numbers import count, p_value, significant
 from steelyard.report.tables import Table, cell, with_decimals
@@ -15,6 +13,7 @@ SCALINGS = {
     "effective": "effective cluster size",
     "none": "nothing: weights as they are",
 }
+HEADINGS = {"size": "Size", "effective": "Effective size", "none": "Nothing"}
 
 
 def multilevel_tables(released: Released) -> list[Table]:
@@ -56,30 +55,26 @@ def _is_coefficient(name: str) -> bool:
 
 
 def _effects(number: int, results: MultilevelResults) -> Table:
-    frame = results.scalings
-    named = [name for name in frame if name not in ("scaling", "effect") and not name.endswith("_se")]
+    records = results.scalings.to_dict("records")
+    named = [
+        name for name in records[0] if name not in ("scaling", "effect") and not str(name).endswith("_se")
+    ]
     decimals = with_decimals(4)
-    first = ("without the multilevel model", decimals(results.plain[0]), decimals(results.plain[1]))
-    rows = [(*first, *("" for _ in named))]
-    for record in frame.to_dict("records"):
-        rows.append((*_with(record, decimals), *(significant(record[name]) for name in named)))
+    rows = [
+        ("effect", decimals(results.plain[0]), *(decimals(record["effect"]) for record in records)),
+        ("its SE", decimals(results.plain[1]), *(decimals(record["effect_se"]) for record in records)),
+    ]
+    rows += [(str(name), "", *(significant(record[name]) for record in records)) for name in named]
     return Table(
         f"multilevel-effects-{number}",
-        f"The effect on {results.outcome} with and without the multilevel model, by what weights are scaled to",
-        ("Model; weights scaled to", "Effect", "SE", *(_capital(str(name)) for name in named)),
+        f"With and without the multilevel model: {results.outcome}",
+        ("", "Without", *(HEADINGS[str(record["scaling"])] for record in records)),
         tuple(rows),
+        groups=(("", 2), ("Rows' weights scaled to", len(records))),
         note="The model compares rows of the same cluster more than it compares clusters; where clusters differ in "
         "ways that the covariates do not hold, the two effects part. Scalings that give different answers say that "
         "clusters are small or weights within them unequal.",
     )
-
-
-def _with(record: dict[str, Any], decimals: Any) -> tuple[str, str, str]:
-    return SCALINGS[str(record["scaling"])], decimals(record["effect"]), decimals(record["effect_se"])
-
-
-def _capital(text: str) -> str:
-    return text[:1].upper() + text[1:]
 
 
 def multilevel_sentence(results: MultilevelResults) -> str:

@@ -77,8 +77,8 @@ class VarianceMade:
         if not self.replicated:
             return ""
         left = int(self.replicates) - len(self.failed or {})
-        factor = self.factor * self.replicates / left
-        by_replicate = set(self.factors) != {1.0}
+        by_replicate = len(set(self.factors)) > 1
+        factor = self.factor * self.replicates / left * (1.0 if by_replicate else self.factors[0])
         centre = "their mean" if self.about_mean else "T"
         text = (
             "Compute any statistic T with combined_weight, and T_r in the same way with combined_replicate_r, for "
