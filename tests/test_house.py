@@ -22,6 +22,7 @@ BELOW = {
     "outcome": {"errors", "plan", "data", "estimate", "exposure"},
     "results": {
         "errors",
+        "keys",
         "plan",
         "data",
         "design",

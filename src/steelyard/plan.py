@@ -178,9 +178,14 @@ class Exposure:
 
 @dataclass(frozen=True, kw_only=True)
 class Balance:
-    """What to check beyond the terms of the exposure formula."""
+    """What to check beyond the terms of the exposure formula.
+
+    ``clusters`` names one of the design's clusters: every difference is then split into what lies between them
+    and within them.
+    """
 
     columns: tuple[str, ...] = ()
+    clusters: str | None = None
     squares: bool = False
     interactions: bool = False
 

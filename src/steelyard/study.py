@@ -2,17 +2,12 @@
 
 from __future__ import annotations
 
-import hashlib
-import json
-import platform
-import time
 import warnings as python_warnings
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from concurrent.futures import Executor
 from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import partial
-from importlib.metadata import version
 from pathlib import Path
 from typing import Any, Literal
 
@@ -26,6 +21,7 @@ from steelyard.balance.moments import term_moments
 from steelyard.data.blocks import Rows
 from steelyard.data.build import build_rows
 from steelyard.data.checkup import Checkup
+from steelyard.data.cluster_means import stage_of_clusters, with_cluster_means
 from steelyard.data.passes import Engine, Progress, silent, threads
 from steelyard.data.source import Extract, open_extract
 from steelyard.design.survey import SurveyDesign, survey_design
@@ -34,8 +30,8 @@ from steelyard.estimate.fit import Fit
 from steelyard.estimate.moments import Moments, MomentsKernel, merge_moments
 from steelyard.estimate.weights import FullSample, SamplingWeights
 from steelyard.exposure.balancing import Balancing
+from steelyard.exposure.cluster_overlap import cluster_overlap
 from steelyard.exposure.propensity import balancing, fit_propensity
-from steelyard.keys import plan_keys
 from steelyard.outcome.contrasts import OutcomeColumns
 from steelyard.plan import Plan, read_plan
 from steelyard.replicates.make import scheme_of
@@ -49,11 +45,10 @@ from steelyard.results.inference import Inference, linearized
 from steelyard.results.multilevel import multilevel_results
 from steelyard.results.overlap import overlap_of, overlap_warnings
 from steelyard.results.replication import Replication, replication, turns
+from steelyard.results.run_record import Watch, run_record
 from steelyard.results.statistic import domain_frame, quantiles_asked, replicate_statistic
 from steelyard.results.variance_made import VarianceMade, by_linearization, by_replication, design_is_named
 from steelyard.results.weights_file import ReplicateWeights, WeightFile, is_written
-
-PACKAGES = ("steelyard", "numpy", "pandas", "scipy", "statsmodels", "patsy", "pyarrow")
 
 
 @dataclass(frozen=True)
@@ -106,16 +101,18 @@ class Study(Plan):
 
     def prepare(self, extract: Any = None, *, block_rows: int = 8192, **where: Any) -> Prepared:
         """Read and check the extract, and build its design rows; ``block_rows`` of them to a block."""
-        watch = _Watch()
+        watch = Watch()
         source = self._open(extract)
         with _engine(**where) as engine, watch("read and build the design rows"):
             rows, checkup = build_rows(source, self, engine, block_rows=block_rows)
+            if self.balance.clusters is not None:
+                rows = with_cluster_means(rows, self.balance.clusters, engine)
             design = survey_design(rows.units, self.design.single_psu)
         return Prepared(source, rows, design, checkup, watch.seconds)
 
     def estimate(self, prepared: Prepared, **where: Any) -> Answer:
         """Estimate propensity, balance and effects on design rows that are ready."""
-        watch = _Watch(prepared.seconds)
+        watch = Watch(prepared.seconds)
         rows, design, blocks = prepared.rows, prepared.design, prepared.rows.blocks
         sampling = SamplingWeights()
         columns = TermColumns(rows.terms)
@@ -128,6 +125,7 @@ class Study(Plan):
             with watch("balance"):
                 moments = term_moments(columns, made, engine, blocks)
                 apart = distances(columns, made, engine, blocks)
+                meeting = self._cluster_overlap(rows, made, engine)
             with watch("effects"):
                 found = groups(rows, self, made, engine)
                 outcomes = _outcome_moments(rows, engine)
@@ -137,7 +135,7 @@ class Study(Plan):
                 if again is None or (self.variance.side_by_side and self._linearizes(again)):
                     linear = linearized(found.with_weights_known(), made, design, rows, engine)
         inference, how = self._headline(again, linear, design)
-        balance = balance_of(columns, moments, apart, inference, self.exposure.estimand, how.df)
+        balance = balance_of(columns, moments, apart, inference, self.exposure.estimand, how.df, meeting)
         as_asked = partial(
             effect_results,
             self,
@@ -186,7 +184,7 @@ class Study(Plan):
                 self, first[known], np.sqrt(outcomes.variance.mean(axis=0)), _ratios(self, inference)
             ),
             warnings=(*told, *not_written),
-            record=_record(self, prepared, watch.seconds, (*told, *not_written), how),
+            record=run_record(self, prepared.checkup.files, watch.seconds, (*told, *not_written), how),
             weights=weights,
         )
 
@@ -248,6 +246,12 @@ class Study(Plan):
         """
         asked = quantiles_asked(self, outcome, tuple(at), self._replicate_method())
         return self.statistic(asked, extract, columns=(outcome,), **where)
+
+    def _cluster_overlap(self, rows: Rows, made: Balancing, engine: Engine) -> pd.DataFrame | None:
+        if self.balance.clusters is None:
+            return None
+        unit = rows.units.ancestor(stage_of_clusters(rows, self.balance.clusters))
+        return cluster_overlap(made, unit, engine, rows.blocks)
 
     def _replicate_method(self) -> str:
         """Return the method that replicates are made by where replicates are needed whatever the plan says."""
@@ -366,35 +370,3 @@ def _fit_warnings(fit: Fit) -> list[str]:
         f"exposure model: {len(fit.aliased)} column(s) are constant in the domain or redundant beside the "
         f"others and were left out: {', '.join(fit.aliased)}."
     ]
-
-
-class _Watch:
-    """Seconds by stage of the work."""
-
-    def __init__(self, before: Mapping[str, float] | None = None) -> None:
-        self.seconds: dict[str, float] = dict(before or {})
-
-    @contextmanager
-    def __call__(self, stage: str) -> Iterator[None]:
-        start = time.perf_counter()
-        try:
-            yield
-        finally:
-            self.seconds[stage] = round(time.perf_counter() - start, 3)
-
-
-def _record(
-    plan: Plan, prepared: Prepared, seconds: Mapping[str, float], told: tuple[str, ...], how: VarianceMade
-) -> dict[str, object]:
-    keys = plan_keys(plan)
-    text = json.dumps(keys, sort_keys=True, ensure_ascii=False)
-    return {
-        "plan": keys,
-        "plan_sha256": hashlib.sha256(text.encode()).hexdigest(),
-        "inputs": prepared.checkup.files.to_dict("records"),
-        "versions": {"python": platform.python_version(), **{name: version(name) for name in PACKAGES}},
-        "seed": dict(how.details).get("seed"),
-        "variance": how.record(),
-        "seconds": dict(seconds),
-        "warnings": list(told),
-    }

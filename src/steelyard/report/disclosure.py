@@ -25,7 +25,15 @@ from steelyard.report.released_counts import (
     released_weights,
 )
 from steelyard.report.released_texts import TextRules
-from steelyard.report.suppression import HIDDEN, Mask, is_hidden, small, under, with_complements
+from steelyard.report.suppression import (
+    HIDDEN,
+    Mask,
+    is_hidden,
+    small,
+    small_but_some,
+    under,
+    with_complements,
+)
 from steelyard.results.answer import Answer
 from steelyard.results.estimates import EstimateResults, JointTest
 from steelyard.results.multilevel import MultilevelResults
@@ -86,6 +94,8 @@ class Released:
     target : str
     balance : frame
         The columns of balance.csv.
+    clusters, cluster_overlap : frames
+        Differences between and within clusters, and where the groups meet; empty where the plan names none.
     joint_before, joint_after, over_identification : JointTest or None
         None where there is none, or it is hidden.
     effects, effects_known : frames
@@ -113,6 +123,8 @@ class Released:
     trimmed: dict[str, object]
     target: str
     balance: pd.DataFrame
+    clusters: pd.DataFrame
+    cluster_overlap: pd.DataFrame
     joint_before: JointTest | None
     joint_after: JointTest | None
     over_identification: JointTest | None
@@ -196,6 +208,8 @@ def release(answer: Answer) -> Released:
         trimmed=released_trimming(overlap.trimmed, minimum, text),
         target=texts.released(overlap.target),
         balance=balance,
+        clusters=_clusters(answer.balance.clusters, hidden_rows),
+        cluster_overlap=_cluster_overlap(answer.balance.cluster_overlap, groups_hidden, minimum),
         joint_before=None if groups_hidden else answer.balance.joint_before,
         joint_after=None if groups_hidden else answer.balance.joint_after,
         over_identification=None if groups_hidden else answer.balance.over_identification,
@@ -235,6 +249,25 @@ def _balance(
     released = _put(released, compared_hidden & ~compared_small, COMPARED_CELLS, HIDDEN)
     released = _put(released, compared_small, COMPARED_CELLS, under(minimum))
     return released, compared_hidden
+
+
+def _clusters(frame: pd.DataFrame, hidden_rows: Mask) -> pd.DataFrame:
+    """Return the split differences of rows that may be compared."""
+    return frame if frame.empty else frame[~hidden_rows[frame["row"].to_numpy()]]
+
+
+def _cluster_overlap(frame: pd.DataFrame, groups_hidden: bool, minimum: int) -> pd.DataFrame:
+    """Return where the groups meet; rows are left out where a kind of cluster has few of them, clusters too."""
+    if frame.empty or groups_hidden:
+        return frame.iloc[:0]
+    released = frame.astype(object)
+    few = np.zeros(len(frame), dtype=bool)
+    for name in ("exposed_rows", "reference_rows"):
+        counts = frame[name].to_numpy()
+        few |= with_complements(counts, small_but_some(counts, minimum), minimum, may_hide=counts > 0)
+    cells = [name for name in frame if name != "clusters_with"]
+    released.loc[few, cells] = HIDDEN
+    return released
 
 
 def _indicators(table: pd.DataFrame) -> Mask:

@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 from steelyard.report.disclosure import Released
-from steelyard.report.numbers import count, p_value, significant
-from steelyard.report.tables import Table, cell, with_decimals
+from steelyard.report.numbers import count, p_value, percent, significant
+from steelyard.report.tables import Table, cell, term_label, with_decimals
 from steelyard.report.words import listed
 from steelyard.results.multilevel import MultilevelResults
 
@@ -14,6 +14,46 @@ SCALINGS = {
     "none": "nothing: weights as they are",
 }
 HEADINGS = {"size": "Size", "effective": "Effective size", "none": "Nothing"}
+
+
+def between_table(released: Released) -> Table:
+    """The differences between clusters and within them, before and after; no rows where the plan names no clusters."""
+    two = with_decimals(2)
+    named = [f"{part}_{when}" for when in ("before", "after") for part in ("smd", "between", "within")]
+    rows = tuple(
+        (term_label(record), *(cell(record[name], two) for name in named))
+        for record in released.clusters.to_dict("records")
+    )
+    clusters = released.plan.balance.clusters
+    return Table(
+        "between-clusters",
+        f"Differences between and within clusters ({clusters})",
+        ("Term", *("All", "Between", "Within") * 2),
+        rows,
+        groups=(("", 1), ("Before: sampling weights", 3), ("After: combined weights", 3)),
+        note="Standardized mean differences; the part between clusters is that of the cluster means, and the two parts "
+        "add up to the whole. Covariates that say something of clusters can take away what is left between them.",
+    )
+
+
+def cluster_overlap_table(released: Released) -> Table:
+    """In how many clusters the groups meet."""
+    rows = tuple(
+        (
+            str(record["clusters_with"]),
+            *(cell(record[name], count) for name in ("clusters", "exposed_rows", "reference_rows")),
+            *(cell(record[name], percent) for name in ("exposed_share", "reference_share")),
+        )
+        for record in released.cluster_overlap.to_dict("records")
+    )
+    return Table(
+        "cluster-overlap",
+        f"Where the groups meet: clusters ({released.plan.balance.clusters})",
+        ("Clusters with", "Clusters", "Exposed", "Reference", "of exposed", "of reference"),
+        rows,
+        groups=(("", 2), ("Rows", 2), ("Share of weight, after", 2)),
+        note="In a cluster with one group alone the comparison is with other clusters.",
+    )
 
 
 def multilevel_tables(released: Released) -> list[Table]:

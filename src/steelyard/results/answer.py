@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import pandas as pd
 
@@ -55,12 +55,18 @@ class BalanceResults:
     ``joint_before`` and ``joint_after`` are the Wald F tests of all differences; ``over_identification`` is the
     chi-square test of the propensity's moment conditions (None where the estimand leaves none to test, as
     for the ATO with a logit).
+    ``clusters``, where the plan names some, splits the standardized differences of the table's rows that vary within
+    them: ``row`` (place in ``table``), ``term``, ``level``, and ``between_before``, ``within_before``,
+    ``between_after``, ``within_after``, whose sums are ``smd_before`` and ``smd_after``. ``cluster_overlap``: see
+    :func:`steelyard.exposure.cluster_overlap.cluster_overlap`.
     """
 
     table: pd.DataFrame
     joint_before: JointTest
     joint_after: JointTest
     over_identification: JointTest | None
+    clusters: pd.DataFrame = field(default_factory=pd.DataFrame)
+    cluster_overlap: pd.DataFrame = field(default_factory=pd.DataFrame)
 
 
 @dataclass(frozen=True)

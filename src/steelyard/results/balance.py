@@ -8,6 +8,7 @@ from numpy.typing import NDArray
 
 from steelyard.balance.columns import TermColumns
 from steelyard.balance.moments import TermMoments
+from steelyard.data.cluster_means import LEVEL
 from steelyard.design.linearization import standard_errors
 from steelyard.estimate.moments import EXPOSED, REFERENCE, Moments
 from steelyard.results.answer import BalanceResults
@@ -30,6 +31,7 @@ def balance_of(
     inference: Inference,
     estimand: str,
     df: float,
+    cluster_overlap: pd.DataFrame | None = None,
 ) -> BalanceResults:
     """Put the balance table together from moments, distances and the design-based covariance.
 
@@ -66,10 +68,47 @@ def balance_of(
         tests[when] = wald_f(values[tested], covariance[np.ix_(tested, tested)], df)
     present = moments.before.present.astype(int)
     table["rows_exposed"], table["rows_reference"] = present[EXPOSED], present[REFERENCE]
+    clusters = _within_and_between(table, spread)
     conditions = None
     if "conditions" in inference.estimates:
         conditions = chi_square(*inference.of("conditions"))
-    return BalanceResults(table, tests["before"], tests["after"], conditions)
+    return BalanceResults(
+        table,
+        tests["before"],
+        tests["after"],
+        conditions,
+        clusters,
+        pd.DataFrame() if cluster_overlap is None else cluster_overlap,
+    )
+
+
+def _within_and_between(table: pd.DataFrame, spread: Floats) -> pd.DataFrame:
+    """Split the standardized differences of rows that have a row of cluster means.
+
+    Notes
+    -----
+    A value is its cluster's mean and what it differs from it, and so is a difference of means: the part between
+    clusters is the difference of the cluster means, over the spread of the term itself, and the rest lies within.
+    """
+    labels = [
+        f"{term}: {level}" if level else term
+        for term, level in zip(table["term"], table["level"], strict=True)
+    ]
+    place = {label: k for k, label in enumerate(labels)}
+    records = []
+    for mean in np.flatnonzero((table["level"] == LEVEL).to_numpy()):
+        row = place[table["term"].iloc[mean]]
+        record: dict[str, object] = {
+            "row": row,
+            "term": table["term"].iloc[row],
+            "level": table["level"].iloc[row],
+        }
+        for when in ("before", "after"):
+            total = table[f"smd_{when}"].iloc[row]
+            between = table[f"mean_difference_{when}"].iloc[mean] / spread[row] if spread[row] > 0 else np.nan
+            record |= {f"smd_{when}": total, f"between_{when}": between, f"within_{when}": total - between}
+        records.append(record)
+    return pd.DataFrame.from_records(records)
 
 
 def balance_warnings(balance: BalanceResults, df: float) -> list[str]:
