@@ -13,6 +13,7 @@ BELOW = {
     "errors": set(),
     "keys": {"errors"},
     "plan": {"errors", "keys"},
+    "plan_file": {"errors", "keys", "plan"},
     "data": {"errors", "plan"},
     "design": {"errors", "plan", "data"},
     "replicates": {"errors", "plan", "data", "design"},
@@ -34,8 +35,8 @@ BELOW = {
     },
     "study": {
         "errors",
-        "keys",
         "plan",
+        "plan_file",
         "data",
         "design",
         "replicates",

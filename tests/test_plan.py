@@ -2,7 +2,8 @@ import pytest
 
 from steelyard.errors import PlanError
 from steelyard.keys import plan_keys
-from steelyard.plan import Design, Exposure, Outcome, Plan, read_plan
+from steelyard.plan import Design, Exposure, Outcome, Plan
+from steelyard.plan_file import read_plan
 
 MINIMAL = """
 [data]

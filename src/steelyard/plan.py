@@ -1,4 +1,4 @@
-"""The plan as frozen dataclasses, and its one other spelling, a TOML file whose keys are their fields.
+"""The plan as frozen dataclasses; its one other spelling is a TOML file whose keys are their fields.
 
 Knows which words a plan may use and which values each may take. Refuses to know how anything is
 computed: every floor of the house may read a plan, so this module imports nothing but the errors.
@@ -6,14 +6,13 @@ computed: every floor of the house may read a plan, so this module imports nothi
 
 from __future__ import annotations
 
-import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import Any, Literal
+from typing import Literal
 
 from steelyard.errors import PlanError
-from steelyard.keys import section, settle
+from steelyard.keys import settle
 
 SinglePsu = Literal["refuse", "recentre", "collapse", "self-representing"]
 Estimand = Literal["ATE", "ATT", "ATC", "ATO"]
@@ -133,7 +132,9 @@ class Exposure:
     ``weighted`` fits the propensity under the sampling weights. ``stabilize`` multiplies the balancing
     weights by the marginal share of each group. ``cap_quantile`` caps the combined weights at that
     quantile of them; ``propensity_range`` drops rows whose propensity lies outside it.
-    ``exposed`` and ``reference`` name the two values compared, where the column is not 0/1.
+    ``exposed`` and ``reference`` name the two values compared, where the column is not 0/1. ``clusters`` names
+    those of the design that are exposed as a whole: the propensity is then modelled on them, under their own
+    weight ``cluster_weight``, or what the rows' weights say of it.
     """
 
     formula: str
@@ -145,6 +146,8 @@ class Exposure:
     propensity_range: tuple[float, float] | None = None
     exposed: Scalar | None = None
     reference: Scalar | None = None
+    clusters: str | None = None
+    cluster_weight: str | None = None
 
     def __post_init__(self) -> None:
         settle(self)
@@ -169,6 +172,15 @@ class Exposure:
             raise PlanError(
                 "exposure.stabilize has no meaning for the ATO: overlap weights are bounded by 1 as they are.",
                 mend="Leave the key out, or choose another estimand.",
+            )
+        if self.cluster_weight is not None and self.clusters is None:
+            raise PlanError(
+                "exposure.cluster_weight is given without exposure.clusters.", mend="Name the clusters too."
+            )
+        if self.clusters is not None and self.cap_quantile is not None:
+            raise PlanError(
+                "exposure.cap_quantile caps rows, and exposure.clusters exposes whole clusters.",
+                mend='Leave the cap out; estimand = "ATO" or exposure.propensity_range tame large weights.',
             )
         if self.reference is not None and self.exposed is None:
             raise PlanError(
@@ -361,32 +373,6 @@ class Plan:
                     f"has {', '.join(self.design.clusters) or 'none'}.",
                     mend="Name stages of design.clusters, the lowest first: clusters then never straddle PSUs.",
                 )
-
-
-def read_plan(path: str | Path) -> dict[str, Any]:
-    """Read a TOML plan and return the keyword arguments of a ``Plan``, ``folder`` included.
-
-    Raises
-    ------
-    PlanError
-        The file cannot be read, is not TOML, or has a key no section knows.
-    """
-    path = Path(path)
-    try:
-        with path.open("rb") as file:
-            raw = tomllib.load(file)
-    except FileNotFoundError:
-        raise PlanError(f"There is no plan file {path}.", mend="Check the name and the folder.") from None
-    except (OSError, UnicodeDecodeError) as error:
-        raise PlanError(f"The plan file {path} cannot be read: {error}.", mend="Check the file.") from None
-    except tomllib.TOMLDecodeError as error:
-        raise PlanError(
-            f"The plan file {path} is not valid TOML: {error}.",
-            mend="Look at that line: text needs quotes, lists need brackets.",
-        ) from None
-    arguments = section(raw, Plan, "")
-    arguments["folder"] = path.parent
-    return arguments
 
 
 def _refuse_fay(fay: float | None, where: str) -> None:

@@ -22,6 +22,7 @@ from steelyard.data.blocks import Rows
 from steelyard.data.build import build_rows
 from steelyard.data.checkup import Checkup
 from steelyard.data.cluster_means import stage_of_clusters, with_cluster_means
+from steelyard.data.exposed_clusters import with_cluster_shares
 from steelyard.data.passes import Engine, Progress, silent, threads
 from steelyard.data.source import Extract, open_extract
 from steelyard.design.survey import SurveyDesign, survey_design
@@ -33,7 +34,8 @@ from steelyard.exposure.balancing import Balancing
 from steelyard.exposure.cluster_overlap import cluster_overlap
 from steelyard.exposure.propensity import balancing, fit_propensity
 from steelyard.outcome.contrasts import OutcomeColumns
-from steelyard.plan import Plan, read_plan
+from steelyard.plan import Plan
+from steelyard.plan_file import read_plan
 from steelyard.replicates.make import scheme_of
 from steelyard.replicates.scheme import Scheme
 from steelyard.results.answer import Answer
@@ -105,6 +107,8 @@ class Study(Plan):
         source = self._open(extract)
         with _engine(**where) as engine, watch("read and build the design rows"):
             rows, checkup = build_rows(source, self, engine, block_rows=block_rows)
+            if self.exposure.clusters is not None:
+                rows = with_cluster_shares(rows, self.exposure, engine)
             if self.balance.clusters is not None:
                 rows = with_cluster_means(rows, self.balance.clusters, engine)
             design = survey_design(rows.units, self.design.single_psu)

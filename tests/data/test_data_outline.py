@@ -17,7 +17,8 @@ from steelyard.data.drafts import toml_text
 from steelyard.data.guesses import ColumnSummary, guess_design, no_answer_codes
 from steelyard.data.outline import outline
 from steelyard.data.source import open_extract
-from steelyard.plan import Plan, SuppliedReplicates, read_plan
+from steelyard.plan import Plan, SuppliedReplicates
+from steelyard.plan_file import read_plan
 from steelyard.study import Study
 
 N = 900

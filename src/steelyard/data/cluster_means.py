@@ -18,7 +18,7 @@ Integers = NDArray[np.int64]
 LEVEL = "cluster"
 
 
-def stage_of_clusters(rows: Rows, clusters: str) -> int:
+def stage_of_clusters(rows: Rows, clusters: str, key: str = "balance.clusters") -> int:
     """Return the stage of the design whose units a column names.
 
     Raises
@@ -29,7 +29,7 @@ def stage_of_clusters(rows: Rows, clusters: str) -> int:
     named = [stage.columns[0] for stage in rows.units.stages[1:]]
     if clusters not in named:
         raise PlanError(
-            f'balance.clusters is "{clusters}"; the design has {", ".join(named) or "no clusters"}.',
+            f'{key} is "{clusters}"; the design has {", ".join(named) or "no clusters"}.',
             mend="Name one of design.clusters.",
         )
     return 1 + named.index(clusters)

@@ -207,7 +207,7 @@ def reader(extract: Extract, plan: Plan) -> Reader:
     for name in carried:
         if kinds[name] == "category":
             raise PlanError(
-                f'The column "{name}" of a multilevel model holds text.',
+                f'The column "{name}", a weight or a slope, holds text.',
                 mend="Weights and slopes are numbers; a category may vary through columns of 0 and 1.",
             )
     complete |= dict.fromkeys((*plan.balance.columns, *carried))
@@ -224,8 +224,10 @@ def reader(extract: Extract, plan: Plan) -> Reader:
 
 
 def carried_columns(plan: Plan) -> tuple[str, ...]:
-    """Return the columns that multilevel models read as they are: weights of levels, and slopes."""
+    """Return the columns that are read as they are: weights of levels and clusters, and slopes."""
     names: dict[str, None] = {}
+    if plan.exposure.cluster_weight is not None:
+        names[plan.exposure.cluster_weight] = None
     for outcome in plan.outcome:
         if outcome.multilevel is not None:
             model = outcome.multilevel

@@ -91,9 +91,34 @@ class UnweightedFit:
         return UnweightedFit(self.columns.only(columns))
 
 
+@dataclass(frozen=True)
+class ClusterShares:
+    """For a fit on clusters: each row counts for its share of its cluster's weight, a column of the design rows.
+
+    A replicate multiplies it as it multiplies the row's own weight.
+    """
+
+    columns: WeightColumns
+    place: int
+
+    @property
+    def count(self) -> int:
+        """How many columns there are."""
+        return self.columns.count
+
+    def __call__(self, block: Block, out: Floats | None = None) -> Floats:
+        """Return the block's (n, K) shares."""
+        multipliers = UnweightedFit(self.columns)(block, out)
+        return np.multiply(multipliers, block.columns[:, self.place, np.newaxis], out=multipliers)
+
+    def only(self, columns: Sequence[int] | Integers) -> ClusterShares:
+        """Return some of the columns."""
+        return ClusterShares(self.columns.only(columns), self.place)
+
+
 def multiplied_by_unit(weights: WeightColumns) -> UnitWeights | None:
     """Return what multiplies the rows' own weights unit by unit; None where the columns are not of that kind."""
-    columns = weights.columns if isinstance(weights, UnweightedFit) else weights
+    columns = weights.columns if isinstance(weights, UnweightedFit | ClusterShares) else weights
     # Asked for every piece of a block: isinstance() of a protocol would cost more than the sums it saves.
     return cast(UnitWeights, columns) if hasattr(columns, "multipliers") else None
 

@@ -35,8 +35,6 @@ class Balancing:
     sampling : WeightColumns
         The sampling weights, K columns.
     estimand : "ATE", "ATT", "ATC" or "ATO"
-    weighted : bool
-        Whether the fit was under the sampling weights.
     share : (K,) or None
         Sampling-weighted share of the exposed, where weights are stabilized; ``total`` (K,) the sum of the
         sampling weights it is a share of.
@@ -55,7 +53,6 @@ class Balancing:
     fit: Fit
     sampling: WeightColumns
     estimand: str
-    weighted: bool = True
     share: Floats | None = None
     total: Floats | None = None
     cap: Floats | None = None
@@ -260,9 +257,9 @@ class BalancedRows:
         """Products that :attr:`Balancing.nuisance_combine` makes the rows' influence on the nuisances."""
         regression = self.plan.fit.regression
         score = regression.likelihood.score(self.block.exposure, self.eta[:, 0])
-        if not self.plan.weighted:
-            weight = self.block.weight
-            score = np.divide(score, weight, out=np.zeros_like(weight), where=weight > 0)
+        # The fit's own weight over the sampling weight: one, where the fit is under the sampling weights.
+        fitted_under, weight = regression.weights.only([0])(self.block)[:, 0], self.block.weight
+        score = score * np.divide(fitted_under, weight, out=np.zeros_like(weight), where=weight > 0)
         products: list[Product] = [(score[:, np.newaxis], self.columns)]
         if self.plan.share is not None:
             assert self.plan.total is not None

@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from steelyard.data.blocks import Block, Rows
+from steelyard.data.exposed_clusters import SHARE
 from steelyard.data.passes import Engine
 from steelyard.data.unit_totals import Product
 from steelyard.errors import OverlapError
@@ -18,7 +19,7 @@ from steelyard.estimate.likelihood import Likelihood
 from steelyard.estimate.quantiles import weighted_quantile
 from steelyard.estimate.regression import Regression, model_moments
 from steelyard.estimate.separation import refuse_separating_columns
-from steelyard.estimate.weights import UnweightedFit, WeightColumns
+from steelyard.estimate.weights import ClusterShares, UnweightedFit, WeightColumns
 from steelyard.exposure.balancing import BalancedRows, Balancing
 from steelyard.plan import Exposure
 
@@ -48,7 +49,7 @@ def fit_propensity(rows: Rows, exposure: Exposure, sampling: WeightColumns, engi
         names=model.names,
         columns=model.of,
         response=exposed,
-        weights=fit_weights(exposure, sampling),
+        weights=fit_weights(exposure, sampling, rows),
         likelihood=Likelihood("binomial", exposure.link),
         intercept=model.intercept,
         what="exposure model",
@@ -78,8 +79,14 @@ def no_products(rows: BalancedRows) -> list[Product]:
     return []
 
 
-def fit_weights(exposure: Exposure, sampling: WeightColumns) -> WeightColumns:
-    """Return the weights that the propensity is fitted under: the sampling weights, or what replicates make of 1."""
+def fit_weights(exposure: Exposure, sampling: WeightColumns, rows: Rows) -> WeightColumns:
+    """Return the weights that the propensity is fitted under.
+
+    The sampling weights; or what replicates make of 1; or, where clusters are exposed, the rows' shares of their
+    clusters' weights.
+    """
+    if exposure.clusters is not None:
+        return ClusterShares(sampling, rows.carried[SHARE])
     return sampling if exposure.weighted else UnweightedFit(sampling)
 
 
@@ -99,7 +106,6 @@ def balancing(
         propensity,
         sampling,
         exposure.estimand,
-        exposure.weighted,
         propensity_range=exposure.propensity_range,
     )
     made = _stabilized(made, exposure, engine, rows.blocks)

@@ -57,12 +57,13 @@ def effects(
     *,
     full: Effects | None = None,
     means: GroupMeans | None = None,
+    exposed: str | None = None,
 ) -> Effects:
     """Estimate the effect on every outcome.
 
     ``full`` are the effects under column 0 where they are known already: outcome models then start at theirs.
     ``means`` are those that :func:`steelyard.outcome.contrasts.outcome_means_asked` asks for, where a pass has
-    found them already.
+    found them already. ``exposed`` names the clusters that are exposed as a whole, if any.
 
     Raises
     ------
@@ -89,7 +90,9 @@ def effects(
         if outcome.multilevel is not None:
             known = None if full is None else full.multilevel[place]
             levels = (
-                multilevel_outcome(outcome, name, rows.outcomes[place], model, rows, balancing, engine)
+                multilevel_outcome(
+                    outcome, name, rows.outcomes[place], model, rows, balancing, engine, exposed
+                )
                 if known is None
                 else known.under(balancing, engine)
             )

@@ -80,6 +80,7 @@ def groups(
         engine,
         full=None if full is None else full.effects,
         means=of_outcomes,
+        exposed=plan.exposure.clusters,
     )
     estimates = {
         "propensity": coefficients(balancing),

@@ -50,12 +50,12 @@ def turns(
 
     ``made`` are the full sample's balancing weights.
     """
-    every = fit_weights(plan.exposure, scheme.columns(0, 0))
+    every = fit_weights(plan.exposure, scheme.columns(0, 0), rows)
     sums = replicate_sums(made.fit, every, engine, rows.blocks)
     for first in range(0, scheme.count, together):
         last = min(first + together, scheme.count)
         sampling = scheme.columns(first, last)
-        fit = refit(made.fit, fit_weights(plan.exposure, sampling), engine, rows.blocks, sums)
+        fit = refit(made.fit, fit_weights(plan.exposure, sampling, rows), engine, rows.blocks, sums)
         balancing = rebalanced(made, plan.exposure, fit, sampling, engine, rows.blocks)
         yield Turn(first, last, balancing, replace(made, sampling=sampling))
 

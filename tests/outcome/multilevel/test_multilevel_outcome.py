@@ -260,7 +260,7 @@ def test_columns_of_the_model_are_looked_at_before_anything_runs():
     with pytest.raises(ExtractError, match="nowhere"):
         study(model=Multilevel(clusters="school", slopes="nowhere")).run(pupils())
     text = pupils().assign(v="text")
-    with pytest.raises(PlanError, match='"v" of a multilevel model holds text'):
+    with pytest.raises(PlanError, match='"v", a weight or a slope, holds text'):
         study(model=Multilevel(clusters="school", slopes="v")).run(text)
     missing = pupils()
     missing.loc[:9, "v"] = np.nan

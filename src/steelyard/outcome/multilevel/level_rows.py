@@ -1,7 +1,7 @@
-"""From the blocks of a study to rows in clusters, with a weight at each level and the balancing weight on the rows.
+"""From the blocks of a study to rows in clusters, with a weight at each level, balancing included.
 
 Rows of one cluster may lie anywhere in the extract; here they stand together. The balancing weight multiplies
-the rows' weights, since that is where the exposure is; a replicate's multiplier belongs to the top-most clusters.
+the weights of the level that is exposed; a replicate's multiplier belongs to the top-most clusters.
 """
 
 from __future__ import annotations
@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from itertools import pairwise
+from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,12 +18,13 @@ from steelyard.data.blocks import Model, Rows
 from steelyard.data.units import Units
 from steelyard.exposure.balancing import Balancing
 from steelyard.outcome.multilevel.nested import Nested
-from steelyard.outcome.multilevel.scaling import from_overall, scaled
+from steelyard.outcome.multilevel.scaling import LevelWeights, carried_to_unscaled, from_overall, scaled
 from steelyard.plan import Multilevel, Scaling
 
 Floats = NDArray[np.float64]
 Integers = NDArray[np.int64]
 
+ExposedLevel = Literal["rows", "clusters", "tops"]
 # Rows to a run, but for the last top-most cluster's.
 RUN_ROWS = 8192
 
@@ -46,6 +48,8 @@ class LevelRows:
     fixed, random : names of the columns
     levels : names of the levels, the lowest first
     from_overall : whether the levels' weights were made from the overall weight
+    exposed_level : "rows", "clusters" or "tops"
+        The level whose weights the balancing weight multiplies.
     """
 
     order: Integers
@@ -63,6 +67,7 @@ class LevelRows:
     random: tuple[str, ...]
     levels: tuple[str, ...]
     from_overall: bool
+    exposed_level: ExposedLevel
 
     @property
     def outermost(self) -> Integers:
@@ -84,8 +89,8 @@ class LevelRows:
         out[self.order] = values
         return out
 
-    def unscaled(self, balancing: Floats, multiplier: Floats) -> tuple[Floats, Floats]:
-        """Return the rows' weights before scaling, (n, K), and the top-most clusters' multipliers, (G, K).
+    def weights(self, balancing: Floats, multiplier: Floats) -> LevelWeights:
+        """Return the weights of all levels before scaling.
 
         Parameters
         ----------
@@ -94,24 +99,47 @@ class LevelRows:
             to all rows of a top-most cluster alike belongs to the cluster, the rest to the rows.
         """
         outermost = self.outermost
-        firsts = np.flatnonzero(np.diff(outermost, prepend=-1))
+        firsts = _firsts(outermost)
         sizes = np.diff(np.append(firsts, len(outermost)))
         of_cluster = np.add.reduceat(multiplier, firsts, axis=0) / sizes[:, np.newaxis]
         shared = of_cluster[outermost]
         rest = np.divide(multiplier, shared, out=np.ones_like(shared), where=shared != 0)
-        return self.row_weight[:, np.newaxis] * balancing * rest, of_cluster
-
-    def runs(self, unscaled: Floats, of_cluster: Floats, scaling: Scaling) -> list[Nested]:
-        """Return the rows in runs that never split a top-most cluster."""
-        row = scaled(unscaled, self.cluster, scaling)
-        cluster_weight, top_weight = self.cluster_weight[:, np.newaxis], None
+        row, cluster = self.row_weight[:, np.newaxis] * rest, self.cluster_weight[:, np.newaxis]
+        top = None if self.top_weight is None else self.top_weight[:, np.newaxis] * of_cluster
         if self.top is None:
-            cluster_weight = cluster_weight * of_cluster
+            cluster = cluster * of_cluster
+        if self.exposed_level == "rows":
+            row = row * balancing
+        elif self.exposed_level == "clusters":
+            cluster = cluster * balancing[_firsts(self.cluster)]
         else:
-            assert self.top_weight is not None
-            cluster_weight = scaled(cluster_weight, self.top, scaling)
-            top_weight = self.top_weight[:, np.newaxis] * of_cluster
-        return list(self._cut(row, cluster_weight, top_weight))
+            assert top is not None
+            top = top * balancing[firsts]
+        return LevelWeights(row, cluster, top)
+
+    def runs(self, weights: LevelWeights, scaling: Scaling) -> list[Nested]:
+        """Return the rows in runs that never split a top-most cluster, weights scaled."""
+        row, cluster = scaled(weights.row, self.cluster, scaling), weights.cluster
+        if self.top is not None:
+            cluster = scaled(cluster, self.top, scaling)
+        return list(self._cut(row, cluster, weights.top))
+
+    def by_balancing(
+        self, row: Floats, cluster: Floats, top: Floats | None, weights: LevelWeights, scaling: Scaling
+    ) -> Floats:
+        """Return derivatives by the logarithm of each row's balancing weight, (n, m), from those of a fit's drifts.
+
+        ``weights`` are those of the full sample, unscaled. Where clusters are exposed all rows of one have the same
+        balancing weight, and share the derivative by it.
+        """
+        if self.exposed_level == "rows":
+            return carried_to_unscaled(row, weights.row[:, 0], self.cluster, scaling)
+        if self.exposed_level == "clusters":
+            if self.top is not None:
+                cluster = carried_to_unscaled(cluster, weights.cluster[:, 0], self.top, scaling)
+            return np.asarray(cluster[self.cluster] / np.bincount(self.cluster)[self.cluster, np.newaxis])
+        assert top is not None
+        return np.asarray(top[self.outermost] / np.bincount(self.outermost)[self.outermost, np.newaxis])
 
     def _cut(self, row: Floats, cluster_weight: Floats, top_weight: Floats | None) -> Iterator[Nested]:
         edges = np.flatnonzero(np.diff(self.outermost, prepend=-1, append=-1))
@@ -138,8 +166,14 @@ class LevelRows:
             )
 
 
-def level_rows(rows: Rows, asked: Multilevel, place: int, model: Model | None) -> LevelRows:
-    """Return the rows of an outcome's model; ``place`` is the outcome's column, ``model`` its covariates."""
+def level_rows(
+    rows: Rows, asked: Multilevel, place: int, model: Model | None, exposed: str | None = None
+) -> LevelRows:
+    """Return the rows of an outcome's model.
+
+    ``place`` is the outcome's column, ``model`` its covariates, ``exposed`` the clusters that are exposed as a
+    whole, if any: the balancing weight belongs to the highest level whose clusters lie within those.
+    """
     columns = np.concatenate([block.columns for block in rows.blocks])
     exposure = np.concatenate([block.exposure for block in rows.blocks])
     sampling = np.concatenate([block.weight for block in rows.blocks])
@@ -150,7 +184,7 @@ def level_rows(rows: Rows, asked: Multilevel, place: int, model: Model | None) -
     order = counted[np.lexsort(codes)]
     cluster_id = stages[0][unit[order]]
     cluster = _numbered(cluster_id)
-    firsts = np.flatnonzero(np.diff(cluster, prepend=-1))
+    firsts = _firsts(cluster)
     top = None if len(stages) < 2 else _numbered(stages[1][unit[order]])[firsts]
     covariates = np.ones((len(order), 1)) if model is None else columns[order][:, list(model.index)]
     names = ("Intercept",) if model is None else model.names
@@ -166,7 +200,7 @@ def level_rows(rows: Rows, asked: Multilevel, place: int, model: Model | None) -
         row = columns[order, rows.carried[asked.row_weight]]
         by_level = [columns[order, rows.carried[name]] for name in asked.cluster_weights]
         cluster_weight = by_level[0][firsts]
-        top_weight = None if top is None else by_level[1][firsts][np.flatnonzero(np.diff(top, prepend=-1))]
+        top_weight = None if top is None else by_level[1][firsts][_firsts(top)]
     return LevelRows(
         order=order,
         count=len(sampling),
@@ -183,6 +217,7 @@ def level_rows(rows: Rows, asked: Multilevel, place: int, model: Model | None) -
         random=("Intercept", *asked.slopes),
         levels=asked.clusters,
         from_overall=asked.row_weight is None,
+        exposed_level=_exposed_level(rows.units, asked.clusters, exposed),
     )
 
 
@@ -198,6 +233,17 @@ def factors(made: Balancing, rows: Rows) -> tuple[Floats, Floats]:
             multipliers.append(multiplier)
             balancing.append(np.broadcast_to(balanced.balancing, multiplier.shape))
     return np.concatenate(balancing), np.concatenate(multipliers)
+
+
+def _exposed_level(units: Units, clusters: Sequence[str], exposed: str | None) -> ExposedLevel:
+    stage = {stage.columns[0]: number for number, stage in enumerate(units.stages) if number}
+    if exposed is None or stage[clusters[0]] < stage[exposed]:
+        return "rows"
+    return "tops" if len(clusters) == 2 and stage[clusters[1]] >= stage[exposed] else "clusters"
+
+
+def _firsts(codes: Integers) -> Integers:
+    return np.flatnonzero(np.diff(codes, prepend=-1))
 
 
 def _stages(units: Units, clusters: Sequence[str]) -> list[Integers]:

@@ -23,7 +23,7 @@ from steelyard.outcome.multilevel.linear_derived import intraclass_correlation
 from steelyard.outcome.multilevel.linear_influence import Drifts, Scores
 from steelyard.outcome.multilevel.linear_standard import LinearModel
 from steelyard.outcome.multilevel.nested import Nested
-from steelyard.outcome.multilevel.scaling import carried_to_unscaled
+from steelyard.outcome.multilevel.scaling import LevelWeights
 from steelyard.plan import Outcome, Scaling
 
 Floats = NDArray[np.float64]
@@ -104,9 +104,18 @@ class MultilevelOutcome:
 
 
 def multilevel_outcome(
-    outcome: Outcome, name: str, place: int, model: Model | None, rows: Rows, made: Balancing, engine: Engine
+    outcome: Outcome,
+    name: str,
+    place: int,
+    model: Model | None,
+    rows: Rows,
+    made: Balancing,
+    engine: Engine,
+    exposed: str | None = None,
 ) -> MultilevelOutcome:
     """Fit an outcome's multilevel model to the full sample, and work out its influences.
+
+    ``exposed`` names the clusters that are exposed as a whole, if any.
 
     Raises
     ------
@@ -118,9 +127,9 @@ def multilevel_outcome(
     Notes
     -----
     Pseudo-maximum likelihood with a weight at each level (Pfeffermann et al. 1998; Rabe-Hesketh & Skrondal 2006);
-    the balancing weight multiplies the rows' conditional weights before they are scaled. A top-most cluster's
-    influence is shared by its rows, which leaves the totals of PSUs as they are; what the estimated propensity
-    brings follows the rows' weights (Binder 1983).
+    the balancing weight multiplies the conditional weights of the level that is exposed, before they are scaled.
+    A top-most cluster's influence is shared by its rows, which leaves the totals of PSUs as they are; what the
+    estimated propensity brings follows the weights of the level that is exposed (Binder 1983).
     """
     assert outcome.multilevel is not None
     if model is not None and model.intercept is None:
@@ -129,15 +138,15 @@ def multilevel_outcome(
             mend="Remove the 0 or -1 from them: the reference group's mean needs it.",
         )
     full = made.only([0])
-    level = level_rows(rows, outcome.multilevel, place, model)
+    level = level_rows(rows, outcome.multilevel, place, model, exposed)
     estimates: dict[Scaling, Estimates] = {}
     fits: dict[Scaling, LinearFit] = {}
     described = LinearModel(
         level.fixed, level.random, level.levels, f'multilevel model of outcome "{outcome.name}"'
     )
-    unscaled, of_cluster = level.unscaled(*(level.of_blocks(part) for part in factors(full, rows)))
+    weights = level.weights(*(level.of_blocks(part) for part in factors(full, rows)))
     for scaling in outcome.multilevel.scaling:
-        runs = level.runs(unscaled, of_cluster, scaling)
+        runs = level.runs(weights, scaling)
         fit = fit_linear(described, engine, runs)
         if "exposure" in fit.aliased:
             raise PlanError(
@@ -145,7 +154,7 @@ def multilevel_outcome(
                 mend="Take the exposure, or what is computed from it, out of the covariates.",
             )
         fits[scaling] = fit
-        estimates[scaling] = _estimates(level, rows, full, fit, runs, unscaled[:, 0], scaling)
+        estimates[scaling] = _estimates(level, rows, full, fit, runs, weights, scaling)
     found = MultilevelOutcome(name, rows, level, estimates, fits, {})
     return found if made.count == 1 else found.under(made, engine)
 
@@ -156,7 +165,7 @@ def _estimates(
     full: Balancing,
     fit: LinearFit,
     runs: Sequence[Nested],
-    unscaled: Floats,
+    weights: LevelWeights,
     scaling: Scaling,
 ) -> Estimates:
     shares = intraclass_correlation(fit)
@@ -165,8 +174,14 @@ def _estimates(
     outermost = level.outermost
     sizes = np.bincount(outermost)
     influence = by_cluster[outermost] / (sizes[outermost] * level.sampling)[:, np.newaxis]
-    drift = carried_to_unscaled(
-        np.concatenate([Drifts(fit)(run).row for run in runs]), unscaled, level.cluster, scaling
+    drifts = [Drifts(fit)(run) for run in runs]
+    of_tops = [part.top for part in drifts if part.top is not None]
+    drift = level.by_balancing(
+        np.concatenate([part.row for part in drifts]),
+        np.concatenate([part.cluster for part in drifts]),
+        np.concatenate(of_tops) if of_tops else None,
+        weights,
+        scaling,
     )
     position = np.concatenate([block.position for block in rows.blocks])
     return Estimates(
@@ -207,7 +222,8 @@ def _values(
     for first in range(1, made.count, COLUMNS_HELD):
         some = np.arange(first, min(first + COLUMNS_HELD, made.count))
         only = made.only([0, *some])
-        runs = level.runs(*level.unscaled(*(level.of_blocks(part) for part in factors(only, rows))), scaling)
+        weights = level.weights(*(level.of_blocks(part) for part in factors(only, rows)))
+        runs = level.runs(weights, scaling)
         again = fit_linear(fit.model, engine, runs, start=fit.values[:, 0])
         values = np.concatenate([again.values, intraclass_correlation(again).values])
         parts.append(values if first == 1 else values[:, 1:])
