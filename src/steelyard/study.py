@@ -6,7 +6,7 @@ import warnings as python_warnings
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from concurrent.futures import Executor
 from contextlib import contextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import partial
 from pathlib import Path
 from typing import Any, Literal
@@ -22,7 +22,7 @@ from steelyard.data.blocks import Rows
 from steelyard.data.build import build_rows
 from steelyard.data.checkup import Checkup
 from steelyard.data.cluster_means import stage_of_clusters, with_cluster_means
-from steelyard.data.exposed_clusters import with_cluster_shares
+from steelyard.data.exposed_clusters import weighed_by_share, with_cluster_shares
 from steelyard.data.passes import Engine, Progress, silent, threads
 from steelyard.data.source import Extract, open_extract
 from steelyard.design.survey import SurveyDesign, survey_design
@@ -39,7 +39,7 @@ from steelyard.plan_file import read_plan
 from steelyard.replicates.make import scheme_of
 from steelyard.replicates.scheme import Scheme
 from steelyard.results.answer import Answer
-from steelyard.results.balance import balance_of, balance_warnings
+from steelyard.results.balance import among_clusters, balance_of, balance_warnings
 from steelyard.results.effects import effect_results, sensitivity_of
 from steelyard.results.estimates import EstimateResults
 from steelyard.results.groups import Groups, groups
@@ -130,6 +130,9 @@ class Study(Plan):
                 moments = term_moments(columns, made, engine, blocks)
                 apart = distances(columns, made, engine, blocks)
                 meeting = self._cluster_overlap(rows, made, engine)
+                clusters = None
+                if self.exposure.clusters is not None:
+                    clusters = term_moments(columns, made, engine, weighed_by_share(rows))
             with watch("effects"):
                 found = groups(rows, self, made, engine)
                 outcomes = _outcome_moments(rows, engine)
@@ -140,6 +143,10 @@ class Study(Plan):
                     linear = linearized(found.with_weights_known(), made, design, rows, engine)
         inference, how = self._headline(again, linear, design)
         balance = balance_of(columns, moments, apart, inference, self.exposure.estimand, how.df, meeting)
+        if clusters is not None:
+            balance = replace(
+                balance, among_clusters=among_clusters(columns, clusters, self.exposure.estimand)
+            )
         as_asked = partial(
             effect_results,
             self,

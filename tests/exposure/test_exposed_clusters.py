@@ -10,6 +10,8 @@ import statsmodels.api as sm
 import oracle
 from steelyard.errors import PlanError, SteelyardWarning
 from steelyard.plan import Design, Exposure, Multilevel, Outcome, Variance
+from steelyard.report.disclosure import release
+from steelyard.report.multilevel import among_clusters_table
 from steelyard.study import Study
 
 pytestmark = pytest.mark.filterwarnings("ignore::steelyard.errors.SteelyardWarning")
@@ -100,6 +102,26 @@ def test_linearization_agrees_with_the_jackknife_in_large_samples(outcome, weigh
     np.testing.assert_allclose(answer.effects_known.bse / answer.beside_known.bse, 1, atol=0.04)
     # The propensity's estimation matters, so that agreement above says something of it.
     assert abs(answer.effects_known.bse.iloc[0] / answer.effects.bse.iloc[0] - 1) > 0.005
+
+
+def test_clusters_are_compared_each_for_its_own_weight():
+    frame = schools()
+    answer = study().run(frame)
+    clusters = one_row_a_school(frame)
+    s, a, z = clusters["w_school"].to_numpy(), clusters["a"].to_numpy(float), clusters["z"].to_numpy()
+    x = np.column_stack([np.ones(len(z)), z])
+    w = s * oracle.balancing_weight("ATE", oracle.expit(x @ oracle.logit_fit(x, a, s)), a)
+    row = answer.balance.among_clusters.set_index("term").loc["z"]
+    variances = [np.average((z - np.average(z, weights=s * g)) ** 2, weights=s * g) for g in (a, 1 - a)]
+    for when, under in (("before", s), ("after", w)):
+        exposed, reference = np.average(z, weights=under * a), np.average(z, weights=under * (1 - a))
+        assert row[f"mean_exposed_{when}"] == pytest.approx(exposed, rel=1e-9)
+        assert row[f"mean_reference_{when}"] == pytest.approx(reference, rel=1e-9)
+        assert row[f"smd_{when}"] == pytest.approx(
+            (exposed - reference) / np.sqrt(np.mean(variances)), rel=1e-8
+        )
+    table = among_clusters_table(release(answer))
+    assert [cells[0] for cells in table.rows] == ["z"]
 
 
 def test_weights_made_of_rows_are_told():

@@ -169,11 +169,13 @@ def _level_names(plan_reader: Reader, tally: Tally) -> tuple[str, str]:
 
 def _constant_warnings(plan_reader: Reader, tally: Tally) -> list[str]:
     constant = {name: f"{low:g}" for name, low in tally.low.items() if low == tally.high[name]}
+    # Weights of clusters and levels may well be one and the same.
+    weights = carried_columns(plan_reader.plan)
     constant |= {name: f'"{next(iter(seen))}"' for name, seen in tally.texts.items() if len(seen) == 1}
     return [
         f"{name} is {constant[name]} in every row of the domain: it tells nothing there."
         for name in plan_reader.complete
-        if name in constant
+        if name in constant and name not in weights
     ]
 
 

@@ -73,6 +73,12 @@ def with_cluster_shares(rows: Rows, exposure: Exposure, engine: Engine) -> Rows:
     )
 
 
+def weighed_by_share(rows: Rows) -> list[Block]:
+    """Return the blocks with the rows' shares of their clusters' weights in place of their sampling weights."""
+    place = rows.carried[SHARE]
+    return [replace(block, weight=np.ascontiguousarray(block.columns[:, place])) for block in rows.blocks]
+
+
 def _note(clusters: str) -> str:
     return (
         f"The propensity is modelled on clusters ({clusters}) under the mean sampling weight of their rows: whether a "

@@ -94,8 +94,9 @@ class Released:
     target : str
     balance : frame
         The columns of balance.csv.
-    clusters, cluster_overlap : frames
-        Differences between and within clusters, and where the groups meet; empty where the plan names none.
+    clusters, cluster_overlap, among_clusters : frames
+        Differences between and within clusters, where the groups meet, and whole clusters compared; empty where the
+        plan names none.
     joint_before, joint_after, over_identification : JointTest or None
         None where there is none, or it is hidden.
     effects, effects_known : frames
@@ -125,6 +126,7 @@ class Released:
     balance: pd.DataFrame
     clusters: pd.DataFrame
     cluster_overlap: pd.DataFrame
+    among_clusters: pd.DataFrame
     joint_before: JointTest | None
     joint_after: JointTest | None
     over_identification: JointTest | None
@@ -209,6 +211,7 @@ def release(answer: Answer) -> Released:
         target=texts.released(overlap.target),
         balance=balance,
         clusters=_clusters(answer.balance.clusters, hidden_rows),
+        among_clusters=_clusters(answer.balance.among_clusters, hidden_rows),
         cluster_overlap=_cluster_overlap(answer.balance.cluster_overlap, groups_hidden, minimum),
         joint_before=None if groups_hidden else answer.balance.joint_before,
         joint_after=None if groups_hidden else answer.balance.joint_after,

@@ -36,6 +36,26 @@ def between_table(released: Released) -> Table:
     )
 
 
+def among_clusters_table(released: Released) -> Table:
+    """Whole clusters compared, where they are what is exposed."""
+    named = [
+        f"{part}_{when}" for when in ("before", "after") for part in ("mean_exposed", "mean_reference", "smd")
+    ]
+    writers = (significant, significant, with_decimals(2)) * 2
+    rows = tuple(
+        (term_label(record), *(writer(record[name]) for name, writer in zip(named, writers, strict=True)))
+        for record in released.among_clusters.to_dict("records")
+    )
+    return Table(
+        "among-clusters",
+        f"The clusters compared ({released.plan.exposure.clusters})",
+        ("Term", *("Exposed", "Reference", "SMD") * 2),
+        rows,
+        groups=(("", 1), ("Before: clusters' weights", 3), ("After: balanced", 3)),
+        note="Each cluster counts for its own weight, shared by its rows; the table above counts persons.",
+    )
+
+
 def cluster_overlap_table(released: Released) -> Table:
     """In how many clusters the groups meet."""
     rows = tuple(
@@ -85,8 +105,9 @@ def _parameters(number: int, results: MultilevelResults) -> Table:
         ("Parameter", "Estimate", "SE", "from", "to", "p"),
         rows,
         groups=(("", 3), ("Interval", 2), ("", 1)),
-        note=f"Pseudo-maximum likelihood on {counted}; rows' weights, times the balancing weight, scaled to "
-        f"{SCALINGS[str(results.scalings['scaling'].iloc[0])]}. No test is shown of a variance: it cannot be negative.",
+        note=f"Pseudo-maximum likelihood on {counted}; rows' weights scaled to "
+        f"{SCALINGS[str(results.scalings['scaling'].iloc[0])]}; the balancing weight multiplies the weights of "
+        f"{results.balanced}. No test is shown of a variance: it cannot be negative.",
     )
 
 
@@ -123,5 +144,6 @@ def multilevel_sentence(results: MultilevelResults) -> str:
     return (
         f"For {results.outcome} the effect is the exposure's coefficient in a linear mixed model with random effects "
         f"of {listed(list(results.clusters))}, fitted by pseudo-maximum likelihood with a weight at each level; the "
-        f"balancing weight multiplied the rows' weights, which were scaled to {listed(scalings)}"
+        f"balancing weight multiplied the weights of {results.balanced}, and rows' weights were scaled to "
+        f"{listed(scalings)}"
     )

@@ -12,7 +12,12 @@ from steelyard.report import tables
 from steelyard.report.disclosure import Released, release
 from steelyard.report.figures import Picture, pictures
 from steelyard.report.methods import methods
-from steelyard.report.multilevel import between_table, cluster_overlap_table, multilevel_tables
+from steelyard.report.multilevel import (
+    among_clusters_table,
+    between_table,
+    cluster_overlap_table,
+    multilevel_tables,
+)
 from steelyard.report.numbers import count, thin
 from steelyard.report.record import plan_toml
 from steelyard.report.side_by_side import METHODS, standard_errors_table, variance_in_words
@@ -156,6 +161,7 @@ def _tables(answer: Answer, released: Released) -> dict[str, tables.Table]:
         tables.group_weights_table(released),
         tables.balance_table(released),
         tables.joint_tests_table(released),
+        among_clusters_table(released),
         between_table(released),
         cluster_overlap_table(released),
         tables.effects_table(released),

@@ -58,7 +58,9 @@ class BalanceResults:
     ``clusters``, where the plan names some, splits the standardized differences of the table's rows that vary within
     them: ``row`` (place in ``table``), ``term``, ``level``, and ``between_before``, ``within_before``,
     ``between_after``, ``within_after``, whose sums are ``smd_before`` and ``smd_after``. ``cluster_overlap``: see
-    :func:`steelyard.exposure.cluster_overlap.cluster_overlap`.
+    :func:`steelyard.exposure.cluster_overlap.cluster_overlap`. ``among_clusters``, where whole clusters are exposed,
+    compares them, each for its own weight and shared by its rows: ``row`` (place in ``table``), ``term``, ``level``,
+    and ``mean_exposed_``, ``mean_reference_`` and ``smd_`` before and after.
     """
 
     table: pd.DataFrame
@@ -67,6 +69,7 @@ class BalanceResults:
     over_identification: JointTest | None
     clusters: pd.DataFrame = field(default_factory=pd.DataFrame)
     cluster_overlap: pd.DataFrame = field(default_factory=pd.DataFrame)
+    among_clusters: pd.DataFrame = field(default_factory=pd.DataFrame)
 
 
 @dataclass(frozen=True)

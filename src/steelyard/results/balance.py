@@ -111,6 +111,26 @@ def _within_and_between(table: pd.DataFrame, spread: Floats) -> pd.DataFrame:
     return pd.DataFrame.from_records(records)
 
 
+def among_clusters(columns: TermColumns, moments: TermMoments, estimand: str) -> pd.DataFrame:
+    """Return the terms compared among clusters, from moments under the rows' shares of their clusters' weights."""
+    spread = moments.spread(estimand)
+    frame = pd.DataFrame(
+        {
+            "row": range(len(columns.terms)),
+            "term": [t.term for t in columns.terms],
+            "level": [t.level for t in columns.terms],
+        }
+    )
+    for when, of_group in (("before", moments.before), ("after", moments.after)):
+        difference = of_group.mean[EXPOSED] - of_group.mean[REFERENCE]
+        frame[f"mean_exposed_{when}"] = of_group.mean[EXPOSED]
+        frame[f"mean_reference_{when}"] = of_group.mean[REFERENCE]
+        frame[f"smd_{when}"] = np.divide(
+            difference, spread, out=np.full_like(difference, np.nan), where=spread > 0
+        )
+    return frame
+
+
 def balance_warnings(balance: BalanceResults, df: float) -> list[str]:
     """Return what a reader should be told about the balance that was reached."""
     warnings = []

@@ -31,6 +31,7 @@ class MultilevelResults:
     plain : (estimate, standard error)
         The effect without the multilevel part, under the same combined weights.
     notes : texts for the reader
+    balanced : what the balancing weight multiplies the weights of: "rows", or the level that is exposed
     """
 
     outcome: str
@@ -39,6 +40,7 @@ class MultilevelResults:
     scalings: pd.DataFrame
     plain: tuple[float, float]
     notes: tuple[str, ...]
+    balanced: str = "rows"
 
 
 def multilevel_results(
@@ -84,6 +86,7 @@ def _results(
         scalings=pd.DataFrame(records),
         plain=(float(plain[0]), float(np.sqrt(max(variance[0, 0], 0)))),
         notes=multilevel_notes(model),
+        balanced={"rows": "rows", "clusters": level.levels[0], "tops": level.levels[-1]}[level.exposed_level],
     )
 
 
