@@ -166,8 +166,8 @@ class Study(Plan):
             *design.notes,
             *_fit_warnings(fit),
             *(() if again is None else (*again.found.scheme.notes, *again.found.warnings())),
-            *overlap_warnings(overlap),
-            *balance_warnings(balance, how.df),
+            *overlap_warnings(overlap, self.exposure.estimand),
+            *balance_warnings(balance, how.df, self.exposure.estimand),
             *(note for results in levels for note in results.notes),
         )
         for text in told:

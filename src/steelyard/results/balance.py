@@ -131,8 +131,9 @@ def among_clusters(columns: TermColumns, moments: TermMoments, estimand: str) ->
     return frame
 
 
-def balance_warnings(balance: BalanceResults, df: float) -> list[str]:
-    """Return what a reader should be told about the balance that was reached."""
+def balance_warnings(balance: BalanceResults, df: float, estimand: str) -> list[str]:
+    """Return what a reader should be told about the balance that was reached, with a mend not in the plan already."""
+    instead = "" if estimand == "ATO" else ", or choose the ATO"
     warnings = []
     table = balance.table
     off = table[table["smd_after"].abs() > BALANCED_SMD]
@@ -142,7 +143,7 @@ def balance_warnings(balance: BalanceResults, df: float) -> list[str]:
         warnings.append(
             f"{len(off)} of {len(table)} terms still differ by more than {BALANCED_SMD} standard deviations "
             f"under the combined weights, most of all {name} ({worst['smd_after']:.2f}). Add terms to the "
-            "exposure formula, or choose the ATO."
+            f"exposure formula{instead}."
         )
     if balance.over_identification is not None and balance.over_identification.df[0] > df / 2:
         warnings.append(

@@ -62,20 +62,22 @@ def target_population(exposure: Exposure, trimmed: dict[str, int]) -> str:
     return text
 
 
-def overlap_warnings(overlap: Overlap) -> list[str]:
-    """Return what a reader should be told about the overlap."""
+def overlap_warnings(overlap: Overlap, estimand: str) -> list[str]:
+    """Return what a reader should be told about the overlap, with a mend that the plan does not have already."""
     warnings = []
+    rarest = "" if estimand == "ATO" else " or the ATO"
+    heaviest = "exposure.cap_quantile" if estimand == "ATO" else "the ATO, exposure.cap_quantile,"
     for group in overlap.groups.itertuples():
         share = group.outside / group.rows
         if share > 0.01:
             warnings.append(
                 f"{share:.1%} of the {group.group} rows have a propensity outside the range of the other "
-                "group: nobody there is comparable with them. Consider exposure.propensity_range or the ATO."
+                f"group: nobody there is comparable with them. Consider exposure.propensity_range{rarest}."
             )
         if group.largest_row_share > HEAVY_ROW:
             warnings.append(
                 f"One {group.group} row carries {group.largest_row_share:.1%} of its group's combined weight. "
-                "Consider the ATO, exposure.cap_quantile, or a simpler exposure formula."
+                f"Consider {heaviest} or a simpler exposure formula."
             )
         if np.isfinite(group.largest_psu_share) and group.largest_psu_share > HEAVY_PSU:
             warnings.append(
