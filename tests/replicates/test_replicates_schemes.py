@@ -239,7 +239,7 @@ def test_half_samples_need_two_psus_and_say_which_strata_have_not():
 def test_a_recentred_lone_psu_cannot_be_redrawn_or_differenced(make):
     rows, *_ = sample([3, 1, 4])
     units = replication_units(survey_design(rows.units, "recentre"))
-    with pytest.raises(DesignError, match=r"\(1\)") as refused:
+    with pytest.raises(DesignError, match=r"1 stratum\(s\) of one PSU are recentred, 1 first") as refused:
         make(units)
     assert "collapse" in refused.value.mend
 

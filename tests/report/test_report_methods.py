@@ -124,8 +124,15 @@ def test_only_ratios_speak_of_logarithms():
 
 def test_multilevel_models_are_said_with_their_references():
     parameters = EstimateResults(np.array([0.1]), np.eye(1), ["exposure"], 260.0)
-    frame = pd.DataFrame({"scaling": ["size", "none"], "effect": [0.1, 0.2], "effect_se": [0.1, 0.1]})
-    results = MultilevelResults("score", {"school": 160}, parameters, frame, (0.1, 0.1), ())
+    frame = pd.DataFrame(
+        {
+            "scaling": ["size", "none"],
+            "parameter": "exposure",
+            "estimate": [0.1, 0.2],
+            "std_error": [0.1, 0.1],
+        }
+    )
+    results = MultilevelResults("score", {"school": 160}, parameters, 1, frame, (0.1, 0.1), ())
     answer = replace(made_answer(plan=made_plan()), multilevel=(results,))
     paragraphs, references = methods(answer)
     assert (

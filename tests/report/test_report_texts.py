@@ -124,3 +124,10 @@ def test_the_target_population_counts_trimmed_rows_only_when_many(count):
 def test_nothing_changes_without_a_minimum():
     rules = TextRules(0, {"exposed": 7, "reference": 5}, False, ("x",))
     assert rules.released("There are only 7 exposed rows.") == "There are only 7 exposed rows."
+
+
+def test_a_replicate_that_separates_does_not_tell_how_few_rows_it_settles():
+    message = "replicate 6 (together, x tell the two groups apart without error for 7 of 500 rows)."
+    assert RULES.released(message) == message.replace("7 of 500 rows", "fewer than 10 of 500 rows")
+    many = message.replace("7 of", "70 of")
+    assert RULES.released(many) == many

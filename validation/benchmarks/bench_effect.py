@@ -15,7 +15,6 @@ import statistics
 import subprocess
 import sys
 import tempfile
-import time
 import warnings
 from pathlib import Path
 
@@ -24,6 +23,7 @@ import pyarrow.parquet as pq
 
 sys.path.insert(0, str(Path(__file__).parent))
 from make_extract import FORMULA, NAMES, write
+from measuring import peak_kb, rows_mb, timed
 
 warnings.simplefilter("ignore")
 
@@ -43,31 +43,15 @@ def plan():
 def peak_of_a_run(path: str) -> None:
     """Print the peak resident memory of one run beyond imports and design rows, in MB."""
     study = plan()
-    before = _peak_kb()
+    before = peak_kb()
     prepared = study.prepare(path)
-    ready = _peak_kb()
+    ready = peak_kb()
     study.estimate(prepared)
-    rows = sum(
-        b.columns.nbytes + b.exposure.nbytes + b.weight.nbytes + b.unit.nbytes + b.position.nbytes
-        for b in prepared.rows.blocks
-    )
-    peak = _peak_kb()
-    beyond = (peak - before) / 1024 - rows / 2**20
-    preparing = (ready - before) / 1024 - rows / 2**20
-    print(json.dumps({"rows_mb": rows / 2**20, "beyond_mb": beyond, "preparing_mb": preparing}))
-
-
-def _peak_kb() -> int:
-    """Return the peak resident memory of this process so far; Linux counts it from the start of the program."""
-    status = Path("/proc/self/status").read_text()
-    return int(status.split("VmHWM:")[1].split()[0])
-
-
-def timed(function, *arguments):
-    """Return seconds and the function's answer."""
-    start = time.perf_counter()
-    answer = function(*arguments)
-    return time.perf_counter() - start, answer
+    rows = rows_mb(prepared.rows)
+    peak = peak_kb()
+    beyond = (peak - before) / 1024 - rows
+    preparing = (ready - before) / 1024 - rows
+    print(json.dumps({"rows_mb": rows, "beyond_mb": beyond, "preparing_mb": preparing}))
 
 
 def main() -> None:

@@ -13,12 +13,12 @@ from __future__ import annotations
 import argparse
 import json
 import statistics
-import time
 import warnings
 from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
+from measuring import timed
 
 from steelyard.data.passes import Engine
 from steelyard.outcome.multilevel.linear import fit_linear
@@ -81,13 +81,6 @@ def split(run: Nested, rows_at_a_time: int) -> list[Nested]:
             )
         )
     return runs
-
-
-def timed(function, *arguments) -> tuple[float, object]:
-    """Return seconds and the function's answer."""
-    start = time.perf_counter()
-    answer = function(*arguments)
-    return time.perf_counter() - start, answer
 
 
 def with_influence(runs: list[Nested]) -> list[np.ndarray]:

@@ -17,7 +17,6 @@ import statistics
 import subprocess
 import sys
 import tempfile
-import time
 import warnings
 from pathlib import Path
 
@@ -26,6 +25,7 @@ import pyarrow.parquet as pq
 
 sys.path.insert(0, str(Path(__file__).parent))
 from make_extract import FORMULA, NAMES, write
+from measuring import peak_kb, rows_mb, timed
 
 warnings.simplefilter("ignore")
 
@@ -71,26 +71,11 @@ def peak_of_a_run(path: str) -> None:
     study = plan()
     import steelyard.results.replication  # noqa: F401
 
-    before = _peak_kb()
+    before = peak_kb()
     prepared = study.prepare(path)
     replicated(study, prepared)
-    rows = sum(
-        b.columns.nbytes + b.exposure.nbytes + b.weight.nbytes + b.unit.nbytes + b.position.nbytes
-        for b in prepared.rows.blocks
-    )
-    print(json.dumps({"rows_mb": rows / 2**20, "beyond_mb": (_peak_kb() - before) / 1024 - rows / 2**20}))
-
-
-def _peak_kb() -> int:
-    status = Path("/proc/self/status").read_text()
-    return int(status.split("VmHWM:")[1].split()[0])
-
-
-def timed(function, *arguments):
-    """Return seconds."""
-    start = time.perf_counter()
-    function(*arguments)
-    return time.perf_counter() - start
+    rows = rows_mb(prepared.rows)
+    print(json.dumps({"rows_mb": rows, "beyond_mb": (peak_kb() - before) / 1024 - rows}))
 
 
 def shown(seconds: dict[str, list[float]], by: float) -> None:
@@ -123,12 +108,12 @@ def speed(prepared, x, a, weight, repeats: int) -> None:
 
     study = plan()
     for _ in range(repeats):
-        seconds["one statsmodels logit"].append(timed(sm.GLM(a, x, family=sm.families.Binomial()).fit))
-        seconds["80 replicates, all again"].append(timed(replicated, study, prepared))
+        seconds["one statsmodels logit"].append(timed(sm.GLM(a, x, family=sm.families.Binomial()).fit)[0])
+        seconds["80 replicates, all again"].append(timed(replicated, study, prepared)[0])
         if glum is not None:
             for name, options in ((ONE_GLUM, {}), (ONE_GLUM_SHARP, {"gradient_tol": 1e-8})):
                 fits = [
-                    timed(lambda w, o=options: glum(w, **o), weight * rng.integers(0, 3, len(weight)))
+                    timed(lambda w, o=options: glum(w, **o), weight * rng.integers(0, 3, len(weight)))[0]
                     for _ in range(GLUM_FITS)
                 ]
                 seconds[name].append(statistics.mean(fits))
@@ -144,8 +129,8 @@ def speed(prepared, x, a, weight, repeats: int) -> None:
 
 def jackknife(prepared) -> None:
     """Time a jackknife of 2,000 PSUs beside 80 replicates."""
-    eighty = timed(replicated, plan(), prepared)
-    many = timed(replicated, plan("jackknife"), prepared)
+    eighty = timed(replicated, plan(), prepared)[0]
+    many = timed(replicated, plan("jackknife"), prepared)[0]
     print(
         f"2,000 PSUs jackknifed {many:.1f} s, 80 replicates {eighty:.2f} s: {many / eighty:.1f}  (wanted: at most 25)"
     )
@@ -155,14 +140,14 @@ def linear(folder: Path, rows: int, prepared) -> None:
     """Show growth with replicates on the same rows, and with rows at 80 replicates."""
     for count in (40, 80, 160, 320):
         print(
-            f"{rows:,} rows, {count} replicates: {timed(replicated, plan(replicates=count), prepared):.2f} s",
+            f"{rows:,} rows, {count} replicates: {timed(replicated, plan(replicates=count), prepared)[0]:.2f} s",
             flush=True,
         )
     for part in (rows // 4, rows // 2, rows):
         path = folder / f"part{part}.parquet"
         write(path, part)
         smaller = plan().prepare(str(path))
-        print(f"{part:,} rows, 80 replicates: {timed(replicated, plan(), smaller):.2f} s", flush=True)
+        print(f"{part:,} rows, 80 replicates: {timed(replicated, plan(), smaller)[0]:.2f} s", flush=True)
 
 
 def main() -> None:

@@ -7,7 +7,6 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from steelyard.errors import DesignError
 from steelyard.replicates.scheme import Scheme, made_scheme
 from steelyard.replicates.units import ReplicationUnits
 
@@ -50,12 +49,7 @@ def bootstrap(units: ReplicationUnits, df: float, replicates: int, seed: int) ->
     this ``m_h`` no weight is ever negative). ``V`` is the mean of squared deviations. Strata are drawn from
     in their order, with numpy's default generator started at ``seed``.
     """
-    if units.lone.any():
-        where = units.labels[np.flatnonzero(units.lone)[0]]
-        raise DesignError(
-            f"The bootstrap cannot redraw in a stratum of one PSU ({where}) that is recentred.",
-            mend='Set design.single_psu = "collapse", or variance.method = "jackknife".',
-        )
+    units.refuse_lone("with nothing there to redraw from")
     generator = np.random.default_rng(seed)
     times = np.zeros((units.count, replicates), dtype=np.uint8)
     order = np.argsort(units.stratum, kind="stable")

@@ -7,7 +7,6 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from steelyard.errors import DesignError
 from steelyard.replicates.hadamard import hadamard, next_order
 from steelyard.replicates.scheme import Scheme, made_scheme
 from steelyard.replicates.units import ReplicationUnits
@@ -51,12 +50,7 @@ def successive_difference(units: ReplicationUnits, df: float, replicates: int) -
     ``V = sum_h (1 - f_h) / 2 sum_i (z_i - z_{i+1})^2`` (Wolter 2007, section 8.2). Rows of the matrix are used
     again, the first row of ones left out, where units outnumber them.
     """
-    if units.lone.any():
-        where = units.labels[np.flatnonzero(units.lone)[0]]
-        raise DesignError(
-            f"A stratum of one PSU ({where}) has no neighbour to differ from.",
-            mend='Set design.single_psu = "collapse", or variance.method = "jackknife".',
-        )
+    units.refuse_lone("with no neighbour to differ from")
     order = next_order(max(replicates, 4))
     sequence = np.lexsort((units.first_rows, units.stratum))
     strata = units.stratum[sequence]

@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from steelyard.data.blocks import Block
 from steelyard.design.survey import SurveyDesign
-from steelyard.errors import PlanError
+from steelyard.errors import DesignError, PlanError
 
 Floats = NDArray[np.float64]
 Integers = NDArray[np.int64]
@@ -54,6 +54,21 @@ class ReplicationUnits:
     def count(self) -> int:
         """How many units there are, V."""
         return len(self.stratum)
+
+    def refuse_lone(self, why: str) -> None:
+        """Refuse strata of one unit whose deviation is taken from the mean of all: ``why`` ends the message.
+
+        Raises
+        ------
+        DesignError
+            With the first such stratum.
+        """
+        if self.lone.any():
+            where = self.labels[np.flatnonzero(self.lone)[0]]
+            raise DesignError(
+                f"{int(self.lone.sum()):,} stratum(s) of one PSU are recentred, {where} first: {why}.",
+                mend='Set design.single_psu = "collapse", or variance.method = "jackknife".',
+            )
 
     def of(self, block: Block) -> Integers:
         """Return the unit of each row of a block, (n,)."""

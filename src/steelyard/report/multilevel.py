@@ -94,9 +94,9 @@ def _parameters(number: int, results: MultilevelResults) -> Table:
             cell(record["std_error"], significant),
             cell(record["ci_low"], significant),
             cell(record["ci_high"], significant),
-            cell(record["p_value"], p_value) if _is_coefficient(str(record["name"])) else "",
+            cell(record["p_value"], p_value) if place < results.coefficients else "",
         )
-        for record in frame.to_dict("records")
+        for place, record in enumerate(frame.to_dict("records"))
     )
     counted = listed([f"{count(n)} clusters of {name}" for name, n in results.clusters.items()])
     return Table(
@@ -106,32 +106,31 @@ def _parameters(number: int, results: MultilevelResults) -> Table:
         rows,
         groups=(("", 3), ("Interval", 2), ("", 1)),
         note=f"Pseudo-maximum likelihood on {counted}; rows' weights scaled to "
-        f"{SCALINGS[str(results.scalings['scaling'].iloc[0])]}; the balancing weight multiplies the weights of "
+        f"{SCALINGS[_scalings(results)[0]]}; the balancing weight multiplies the weights of "
         f"{results.balanced}. No test is shown of a variance: it cannot be negative.",
     )
 
 
-def _is_coefficient(name: str) -> bool:
-    return not name.startswith(("variance", "covariance", "intraclass"))
-
-
 def _effects(number: int, results: MultilevelResults) -> Table:
-    records = results.scalings.to_dict("records")
-    named = [
-        name for name in records[0] if name not in ("scaling", "effect") and not str(name).endswith("_se")
-    ]
     decimals = with_decimals(4)
+    scalings = _scalings(results)
+    by_scaling = [results.scalings[results.scalings["scaling"] == scaling] for scaling in scalings]
+    effects = [frame.iloc[0] for frame in by_scaling]
     rows = [
-        ("effect", decimals(results.plain[0]), *(decimals(record["effect"]) for record in records)),
-        ("its SE", decimals(results.plain[1]), *(decimals(record["effect_se"]) for record in records)),
+        ("effect", decimals(results.plain[0]), *(decimals(effect["estimate"]) for effect in effects)),
+        ("its SE", decimals(results.plain[1]), *(decimals(effect["std_error"]) for effect in effects)),
     ]
-    rows += [(str(name), "", *(significant(record[name]) for record in records)) for name in named]
+    rows += [
+        (str(name), "", *(significant(frame["estimate"].iloc[k]) for frame in by_scaling))
+        for k, name in enumerate(by_scaling[0]["parameter"])
+        if k
+    ]
     return Table(
         f"multilevel-effects-{number}",
         f"With and without the multilevel model: {results.outcome}",
-        ("", "Without", *(HEADINGS[str(record["scaling"])] for record in records)),
+        ("", "Without", *(HEADINGS[scaling] for scaling in scalings)),
         tuple(rows),
-        groups=(("", 2), ("Rows' weights scaled to", len(records))),
+        groups=(("", 2), ("Rows' weights scaled to", len(scalings))),
         note="The model compares rows of the same cluster more than it compares clusters; where clusters differ in "
         "ways that the covariates do not hold, the two effects part. Scalings that give different answers say that "
         "clusters are small or weights within them unequal.",
@@ -140,10 +139,15 @@ def _effects(number: int, results: MultilevelResults) -> Table:
 
 def multilevel_sentence(results: MultilevelResults) -> str:
     """Return what the methods say of one model, without its references and full stop."""
-    scalings = [SCALINGS[str(scaling)].split(":")[0] for scaling in results.scalings["scaling"]]
+    scalings = [SCALINGS[scaling].split(":")[0] for scaling in _scalings(results)]
     return (
         f"For {results.outcome} the effect is the exposure's coefficient in a linear mixed model with random effects "
         f"of {listed(list(results.clusters))}, fitted by pseudo-maximum likelihood with a weight at each level; the "
         f"balancing weight multiplied the weights of {results.balanced}, and rows' weights were scaled to "
         f"{listed(scalings)}"
     )
+
+
+def _scalings(results: MultilevelResults) -> list[str]:
+    """Return the scalings that were asked for, the answer's first."""
+    return [str(scaling) for scaling in results.scalings["scaling"].unique()]

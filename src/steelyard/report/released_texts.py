@@ -12,7 +12,7 @@ from dataclasses import dataclass
 
 _NUMBER = r"(?P<n>\d{1,3}(?:,\d{3})+|\d+)"
 _ROWS = re.compile(
-    rf"(?<![\d.,]){_NUMBER}(?P<after> (?:of the [\d,]+ )?(?:(?:exposed|reference) )?row(?:\(s\)|s)?\b)"
+    rf"(?<![\d.,]){_NUMBER}(?P<after> (?:of (?:the )?[\d,]+ )?(?:(?:exposed|reference) )?row(?:\(s\)|s)?\b)"
 )
 _SHARE_OF_GROUP = re.compile(
     r"(?P<share>\d+(?:\.\d+)?)% of the (?P<group>exposed|reference|domain)(?P<after>(?: rows)?)"

@@ -25,9 +25,11 @@ class MultilevelResults:
         Level -> clusters with a row that carries weight, the lowest level first.
     parameters : EstimateResults
         Coefficients, variances, intraclass correlations, under the answer's scaling.
+    coefficients : int
+        How many of them are coefficients: they come first, the exposure's last of them.
     scalings : frame
-        ``scaling``, then ``effect``, ``effect_se``, and the same for each variance and correlation by its name:
-        a row for each scaling that was asked for, the answer's first.
+        ``scaling``, ``parameter``, ``estimate``, ``std_error``: the effect and what comes after it, under each
+        scaling that was asked for, the answer's first.
     plain : (estimate, standard error)
         The effect without the multilevel part, under the same combined weights.
     notes : texts for the reader
@@ -37,6 +39,7 @@ class MultilevelResults:
     outcome: str
     clusters: dict[str, int]
     parameters: EstimateResults
+    coefficients: int
     scalings: pd.DataFrame
     plain: tuple[float, float]
     notes: tuple[str, ...]
@@ -58,18 +61,20 @@ def _results(
     place: int, model: MultilevelOutcome, inference: Inference, df: float, confidence: float
 ) -> MultilevelResults:
     effect_place = len(model.level.fixed) - 1
-    records = []
+    frames = []
     for scaling, estimates in model.estimates.items():
         values, covariance = inference.of(f"levels {place} {scaling}")
-        se = standard_errors(covariance)
-        record: dict[str, object] = {
-            "scaling": scaling,
-            "effect": values[effect_place],
-            "effect_se": se[effect_place],
-        }
-        for k in range(effect_place + 1, len(values)):
-            record[estimates.names[k]], record[f"{estimates.names[k]}_se"] = values[k], se[k]
-        records.append(record)
+        shown = slice(effect_place, None)
+        frames.append(
+            pd.DataFrame(
+                {
+                    "scaling": scaling,
+                    "parameter": estimates.names[shown],
+                    "estimate": values[shown],
+                    "std_error": standard_errors(covariance)[shown],
+                }
+            )
+        )
     plain, variance = inference.of(f"plain {place}")
     level = model.level
     counts = [level.clusters] if level.top is None else [level.clusters, int(level.top[-1]) + 1]
@@ -83,7 +88,8 @@ def _results(
             title=f"Multilevel model of {model.name}",
             confidence=confidence,
         ),
-        scalings=pd.DataFrame(records),
+        coefficients=effect_place + 1,
+        scalings=pd.concat(frames, ignore_index=True),
         plain=(float(plain[0]), float(np.sqrt(max(variance[0, 0], 0)))),
         notes=multilevel_notes(model),
         balanced={"rows": "rows", "clusters": level.levels[0], "tops": level.levels[-1]}[level.exposed_level],

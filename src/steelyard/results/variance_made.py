@@ -67,7 +67,8 @@ class VarianceMade:
                 "replicate_factors": 1.0 if set(self.factors) == {1.0} else list(self.factors),
                 "propensity": self.propensity,
                 "centre": "replicate-mean" if self.about_mean else "full-sample",
-                "failed": {str(r): why for r, why in (self.failed or {}).items()},
+                # Why they failed may count few rows: reasons stand in the warnings, which are released.
+                "failed": sorted(self.failed or {}),
                 **dict(self.details),
             }
         return out

@@ -17,6 +17,8 @@ from steelyard.exposure.influence import joint_influence
 from steelyard.exposure.propensity import balancing, fit_propensity
 from steelyard.outcome.multilevel.outcome import multilevel_outcome
 from steelyard.plan import Design, Exposure, Multilevel, Outcome, Variance
+from steelyard.report.disclosure import release
+from steelyard.report.multilevel import multilevel_tables
 from steelyard.study import Study
 
 pytestmark = pytest.mark.filterwarnings("ignore::steelyard.errors.SteelyardWarning")
@@ -96,9 +98,8 @@ def test_linearization_agrees_with_the_jackknife_in_large_samples():
         ratio = answer.multilevel[0].parameters.bse / linear.multilevel[0].parameters.bse
         np.testing.assert_allclose(ratio, 1, atol=0.05)
         np.testing.assert_allclose(answer.effects_known.bse / linear.effects_known.bse, 1, atol=0.05)
-        for name in [c for c in answer.multilevel[0].scalings if str(c).endswith("_se")]:
-            pair = answer.multilevel[0].scalings[name] / linear.multilevel[0].scalings[name]
-            np.testing.assert_allclose(pair, 1, atol=0.05)
+        pair = answer.multilevel[0].scalings["std_error"] / linear.multilevel[0].scalings["std_error"]
+        np.testing.assert_allclose(pair, 1, atol=0.05)
 
 
 STEP = 1e-4
@@ -221,6 +222,21 @@ def test_the_effect_without_the_model_stands_beside_it():
     bare = study(outcome=(Outcome(name="y", multilevel=Multilevel(clusters="school")),)).run(frame)
     contrast = study(outcome=(Outcome(name="y"),)).run(frame)
     assert bare.multilevel[0].plain[0] == pytest.approx(contrast.effects.params.iloc[0])
+
+
+def test_the_tables_do_not_guess_from_names():
+    # A covariate that is called like a variance is still a coefficient; a slope's name may end in anything.
+    frame = pupils().rename(columns={"v": "v_se"})
+    frame["variance_x"] = frame["x"]
+    model = Multilevel(clusters="school", slopes="v_se", scaling=("size", "none"))
+    outcome = Outcome(name="y", covariates="variance_x", multilevel=model)
+    answer = study(outcome=(outcome,)).run(frame)
+    parameters, effects = multilevel_tables(release(answer))
+    shown = {row[0]: row[-1] for row in parameters.rows}
+    assert shown["variance_x"] != ""
+    assert shown["variance: school v_se"] == ""
+    assert "variance: school v_se" in [row[0] for row in effects.rows]
+    assert [len(row) for row in effects.rows] == [4] * len(effects.rows)
 
 
 @pytest.mark.parametrize(

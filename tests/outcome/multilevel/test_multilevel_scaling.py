@@ -7,7 +7,6 @@ import pytest
 
 from steelyard.errors import PlanError
 from steelyard.outcome.multilevel.scaling import (
-    carried_to_overall,
     carried_to_unscaled,
     from_overall,
     scaled,
@@ -86,17 +85,3 @@ def test_derivatives_carried_through_the_scaling(method):
     carrying = WEIGHT > 0
     found = carried_to_unscaled(by_scaled * carrying[:, np.newaxis], WEIGHT, GROUP, method)
     np.testing.assert_allclose(found, numerical(number, WEIGHT), atol=1e-8)
-
-
-@pytest.mark.parametrize("top", [None, TOP], ids=["two levels", "three levels"])
-def test_derivatives_carried_through_made_levels(top):
-    weight = RNG.uniform(1, 9, 8)
-    by_row, by_cluster, by_top = RNG.normal(size=(8, 2)), RNG.normal(size=(4, 2)), RNG.normal(size=(2, 2))
-
-    def number(weight):
-        levels = from_overall(weight[:, np.newaxis], GROUP, top)
-        value = by_row.T @ np.log(levels.row[:, 0]) + by_cluster.T @ np.log(levels.cluster[:, 0])
-        return value if top is None else value + by_top.T @ np.log(levels.top[:, 0])
-
-    found = carried_to_overall(by_row, by_cluster, None if top is None else by_top, weight, GROUP, top)
-    np.testing.assert_allclose(found, numerical(number, weight), atol=1e-8)

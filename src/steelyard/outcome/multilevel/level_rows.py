@@ -174,7 +174,10 @@ def level_rows(
     ``place`` is the outcome's column, ``model`` its covariates, ``exposed`` the clusters that are exposed as a
     whole, if any: the balancing weight belongs to the highest level whose clusters lie within those.
     """
-    columns = np.concatenate([block.columns for block in rows.blocks])
+
+    def column(where: int) -> Floats:
+        return np.concatenate([block.columns[:, where] for block in rows.blocks])[order]
+
     exposure = np.concatenate([block.exposure for block in rows.blocks])
     sampling = np.concatenate([block.weight for block in rows.blocks])
     unit = np.concatenate([block.unit for block in rows.blocks])
@@ -186,26 +189,24 @@ def level_rows(
     cluster = _numbered(cluster_id)
     firsts = _firsts(cluster)
     top = None if len(stages) < 2 else _numbered(stages[1][unit[order]])[firsts]
-    covariates = np.ones((len(order), 1)) if model is None else columns[order][:, list(model.index)]
+    covariates = [np.ones(len(order))] if model is None else [column(k) for k in model.index]
     names = ("Intercept",) if model is None else model.names
-    slopes = [
-        exposure[order] if name == "exposure" else columns[order, rows.carried[name]] for name in asked.slopes
-    ]
+    slopes = [exposure[order] if name == "exposure" else column(rows.carried[name]) for name in asked.slopes]
     s = sampling[order]
     if asked.row_weight is None:
         made = from_overall(s[:, np.newaxis], cluster, top)
         row, cluster_weight = made.row[:, 0], made.cluster[:, 0]
         top_weight = None if made.top is None else made.top[:, 0]
     else:
-        row = columns[order, rows.carried[asked.row_weight]]
-        by_level = [columns[order, rows.carried[name]] for name in asked.cluster_weights]
+        row = column(rows.carried[asked.row_weight])
+        by_level = [column(rows.carried[name]) for name in asked.cluster_weights]
         cluster_weight = by_level[0][firsts]
         top_weight = None if top is None else by_level[1][firsts][_firsts(top)]
     return LevelRows(
         order=order,
         count=len(sampling),
-        y=columns[order, place],
-        x=np.column_stack([covariates, exposure[order]]),
+        y=column(place),
+        x=np.column_stack([*covariates, exposure[order]]),
         z=np.column_stack([np.ones(len(order)), *slopes]),
         cluster=cluster,
         top=top,

@@ -94,13 +94,25 @@ class MultilevelOutcome:
 
     def under(self, made: Balancing, engine: Engine) -> MultilevelOutcome:
         """Return the model under other columns of weights, whose column 0 is the one it has."""
-        estimates, failed = {}, dict(made.failed)
-        for scaling, fit in self.fits.items():
-            values, why = _values(self.level, self.rows, made, fit, scaling, engine)
+        parts: dict[Scaling, list[Floats]] = {scaling: [] for scaling in self.fits}
+        failed: dict[int, str] = {}
+        for first in range(1, made.count, COLUMNS_HELD):
+            some = np.arange(first, min(first + COLUMNS_HELD, made.count))
+            weights = self.level.weights(
+                *(self.level.of_blocks(part) for part in factors(made.only([0, *some]), self.rows))
+            )
+            for scaling, fit in self.fits.items():
+                runs = self.level.runs(weights, scaling)
+                again = fit_linear(fit.model, engine, runs, start=fit.values[:, 0])
+                values = np.concatenate([again.values, intraclass_correlation(again).values])
+                parts[scaling].append(values if first == 1 else values[:, 1:])
+                failed |= {int(some[column - 1]): why for column, why in again.failed.items()}
+        estimates = {}
+        for scaling, found in parts.items():
+            values = np.concatenate(found, axis=1)
             values[:, list(made.failed)] = np.nan
             estimates[scaling] = replace(self.estimates[scaling], values=values)
-            failed = {**why, **failed}
-        return replace(self, estimates=estimates, failed=failed)
+        return replace(self, estimates=estimates, failed={**failed, **made.failed})
 
 
 def multilevel_outcome(
@@ -211,21 +223,3 @@ def _through_propensity(full: Balancing, rows: Rows, drift: Floats) -> Floats:
         if full.share is not None:
             total[-1] += in_share @ here
     return total
-
-
-def _values(
-    level: LevelRows, rows: Rows, made: Balancing, fit: LinearFit, scaling: Scaling, engine: Engine
-) -> tuple[Floats, dict[int, str]]:
-    """Return parameters and shares of variance under every column of weights, (k, K), and why columns have none."""
-    parts: list[Floats] = []
-    failed: dict[int, str] = {}
-    for first in range(1, made.count, COLUMNS_HELD):
-        some = np.arange(first, min(first + COLUMNS_HELD, made.count))
-        only = made.only([0, *some])
-        weights = level.weights(*(level.of_blocks(part) for part in factors(only, rows)))
-        runs = level.runs(weights, scaling)
-        again = fit_linear(fit.model, engine, runs, start=fit.values[:, 0])
-        values = np.concatenate([again.values, intraclass_correlation(again).values])
-        parts.append(values if first == 1 else values[:, 1:])
-        failed |= {int(some[column - 1]): why for column, why in again.failed.items()}
-    return np.concatenate(parts, axis=1), failed

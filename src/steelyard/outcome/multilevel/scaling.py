@@ -124,35 +124,6 @@ def from_overall(overall: Floats, cluster: Integers, top: Integers | None) -> Le
     return LevelWeights(row, within_top, means)
 
 
-def carried_to_overall(
-    by_row: Floats,
-    by_cluster: Floats,
-    by_top: Floats | None,
-    overall: Floats,
-    cluster: Integers,
-    top: Integers | None,
-) -> Floats:
-    """Return derivatives by the logarithms of the overall weights, (n, m), from those by the levels' weights.
-
-    Parameters
-    ----------
-    by_row, by_cluster, by_top : (n, m), (J, m), (T, m) or None
-        Derivatives of m numbers by the logarithms of the weights that :func:`from_overall` made.
-    overall : (n,)
-    cluster, top
-        As in :func:`from_overall`.
-
-    Notes
-    -----
-    A group's mean moves by ``w_k / sum w`` with the logarithm of member k, and what remains of each
-    member by that much less.
-    """
-    if top is not None and by_top is not None:
-        mean = from_overall(overall[:, np.newaxis], cluster, None).cluster[:, 0]
-        by_cluster = _joined(by_cluster, by_top, mean, top)
-    return _joined(by_row, by_cluster, overall, cluster)
-
-
 def known(method: str) -> None:
     """Refuse a scaling that is none of the three."""
     if method not in get_args(Scaling):
@@ -178,12 +149,6 @@ def _split(weight: Floats, group: Integers) -> tuple[Floats, Floats]:
     count, total = _numerator_and_denominator(weight, group, "size")
     mean = _ratio(total, count)
     return _ratio(weight, mean[group]), mean
-
-
-def _joined(by_member: Floats, by_mean: Floats, weight: Floats, group: Integers) -> Floats:
-    first = firsts(group)
-    moved = by_mean - np.add.reduceat(by_member, first, axis=0)
-    return np.asarray(by_member + _share(weight, group, first)[:, np.newaxis] * moved[group])
 
 
 def _share(value: Floats, group: Integers, first: Integers) -> Floats:
